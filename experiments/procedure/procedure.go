@@ -1,0 +1,101 @@
+// Package procedure decides the level of every trial from the responses to the
+// trials before it. Procedures are deterministic: the same Spec, stream and
+// responses give the same levels, bit for bit, so that a procedure needs no
+// saved state beyond the recorded responses.
+package procedure
+
+// A Procedure chooses the levels of one track of trials.
+type Procedure interface {
+	// Next gives the levels of the next trial, one per Spec.Parameters; ok is false when the
+	// track has ended. Calling it twice without Record gives the same levels.
+	// The slice is valid until the next call.
+	Next() (levels []float64, ok bool)
+
+	// Record takes the outcome of the trial at the levels that Next gave.
+	// outcome is the index of the response category; for correct/incorrect
+	// tasks 1 is correct and 0 is not.
+	Record(outcome int)
+
+	// Trials is the number of outcomes recorded.
+	Trials() int
+
+	// Progress is the share of the track done, 0 to 1, never falling.
+	Progress() float64
+
+	// Estimate is the track's own estimate so far.
+	Estimate() Estimate
+}
+
+// Estimate is a procedure's own estimate of the threshold on the level's scale.
+// Valid is false while there is none (no reversals yet, say): the numbers are
+// then zero, and Reason says why.
+type Estimate struct {
+	Valid     bool
+	Threshold float64 // in the level's own unit
+	SDLog10   float64 // posterior or reversal sd: log10 units on a log scale, the level's unit on a linear one
+	Slope     float64 // 0 where the procedure does not estimate it
+	Lapse     float64
+	Reversals int
+	Reason    string
+}
+
+// Method names a family of procedures.
+type Method int
+
+// Methods, named in study files as in MethodNames.
+const (
+	Constant Method = iota // method of constant stimuli
+	Staircase
+	QuestPlus
+)
+
+// MethodNames are the names in study files, indexed by Method.
+var MethodNames = []string{"constant", "staircase", "quest_plus"}
+
+// Scale is the axis on which levels are stepped and fitted.
+type Scale int
+
+// Scales, named in study files as in ScaleNames.
+const (
+	Log10 Scale = iota
+	Linear
+)
+
+// ScaleNames are the names in study files, indexed by Scale.
+var ScaleNames = []string{"log10", "linear"}
+
+// Spec is a procedure as written in a study file. Which fields matter depends on Method.
+type Spec struct {
+	Method    Method
+	Parameter string // key of the display parameter that is varied
+	Scale     Scale
+	Min, Max  float64 // lowest and highest level, in the parameter's unit
+	MinTrials int
+	MaxTrials int
+
+	// Constant.
+	Levels     []float64
+	Repetition int // trials per level
+
+	// Staircase (Levitt 1971; Kaernbach 1991; García-Pérez 1998).
+	Start     float64
+	Down      int       // correct responses in a row before a step towards harder
+	Up        int       // wrong responses in a row before a step towards easier
+	StepsUp   []float64 // step size towards easier until each reversal, the last one stays: log10 units or the level's unit
+	StepRatio float64   // size of a step towards harder ÷ a step towards easier
+	Reversals int       // ends after this many, 0: by MaxTrials alone
+	Discard   int       // reversals left out of the estimate
+	EasierIs  int       // +1: a higher level is easier, −1: a lower one is
+
+	// QuestPlus (Watson 2017): Weibull on the chosen scale.
+	ThresholdMin, ThresholdMax float64
+	ThresholdCount             int
+	Slopes                     []float64
+	Lapses                     []float64
+	Guess                      float64
+	LevelCount                 int     // levels from Min to Max, evenly on the scale
+	StopSDLog10                float64 // ends when the posterior sd of the threshold is below, 0: never
+	// Nuisance: slope and lapse are integrated out and trials are spent on the
+	// threshold alone (Prins 2013).
+	Nuisance bool
+}
