@@ -105,15 +105,15 @@ type DisplayCheck struct {
 // TrialRecord: one trial. What the engine decided can be re-created from
 // bundle, seed and the records before; it is stored all the same and compared by replay.
 type TrialRecord struct {
-	Block     string    // "block": name
-	Trial     int       // "trial": number in the run, from 0; selects the random streams
-	Track     int       // "track": which track of the procedure, −1 in none
-	Practice  bool      // "practice"
-	Catch     bool      // "catch"
-	Task      string    // "task"
-	Display   string    // "display"
-	Condition string    // "condition": name, "" where there are none
-	Keys      []string  // "values": {key: number}: every display parameter that this trial set (balanced, condition, catch, level)
+	Block     string   // "block": name
+	Trial     int      // "trial": number in the run, from 0; selects the random streams
+	Track     int      // "track": which track of the procedure, −1 in none
+	Practice  bool     // "practice"
+	Catch     bool     // "catch"
+	Task      string   // "task"
+	Display   string   // "display"
+	Condition string   // "condition": name, "" where there are none
+	Keys      []string // "values": {key: number}: every display parameter that this trial set (balanced, condition, catch, level)
 	Values    []float64
 	Level     float64   // "level": of the procedure's parameter; null (NaN) outside one
 	Truths    []float64 // "truths": {name: number} as the display reports them
