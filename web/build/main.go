@@ -1,0 +1,153 @@
+// Command build makes what browsers load into web/dist: the WebAssembly
+// engine, the script and style bundles, each with a brotli copy, and
+// manifest.json with their digests. Run it as `go run ./web/build` from the
+// top of the tree, after `npm ci` in web.
+package main
+
+import (
+	"bytes"
+	"context"
+	"crypto/sha256"
+	"encoding/base64"
+	"encoding/hex"
+	"encoding/json"
+	"errors"
+	"flag"
+	"fmt"
+	"os"
+	"os/exec"
+	"path/filepath"
+	"strings"
+	"time"
+
+	"github.com/andybalholm/brotli"
+	"github.com/evanw/esbuild/pkg/api"
+
+	"distal/web"
+)
+
+func main() {
+	quick := flag.Bool("quick", false, "compress less: for development")
+	out := flag.String("o", "web/dist", "folder to write to")
+	flag.Parse()
+	if err := build(context.Background(), *out, *quick); err != nil {
+		fmt.Fprintln(os.Stderr, "build:", err)
+		os.Exit(1)
+	}
+}
+
+// bundle is one script or style with its entry point.
+type bundle struct {
+	name, entry, file, mediaType string
+}
+
+var bundles = []bundle{
+	{"participant_js", "web/participant/main.ts", "participant.js", "text/javascript"},
+	{"participant_css", "web/style/participant.css", "participant.css", "text/css"},
+	{"workspace_js", "web/workspace/main.ts", "workspace.js", "text/javascript"},
+	{"workspace_css", "web/style/workspace.css", "workspace.css", "text/css"},
+}
+
+func build(ctx context.Context, out string, quick bool) error {
+	if _, err := os.Stat("web/build/main.go"); err != nil {
+		return errors.New("run it from the top of the tree")
+	}
+	if err := os.MkdirAll(out, 0o755); err != nil {
+		return err
+	}
+	level := brotli.BestCompression
+	if quick {
+		level = brotli.DefaultCompression
+	}
+
+	var assets []web.Asset
+	engine, err := buildEngine(ctx, out)
+	if err != nil {
+		return err
+	}
+	asset, err := write(out, "engine", "engine.wasm", "application/wasm", engine, level)
+	if err != nil {
+		return err
+	}
+	assets = append(assets, asset)
+
+	for _, b := range bundles {
+		text, err := b.build()
+		if err != nil {
+			return err
+		}
+		asset, err := write(out, b.name, b.file, b.mediaType, text, level)
+		if err != nil {
+			return err
+		}
+		assets = append(assets, asset)
+	}
+	manifest, err := json.MarshalIndent(assets, "", "  ")
+	if err != nil {
+		return err
+	}
+	return os.WriteFile(filepath.Join(out, "manifest.json"), manifest, 0o644)
+}
+
+// buildEngine compiles web/engine as a reactor module without the symbol table.
+func buildEngine(ctx context.Context, out string) ([]byte, error) {
+	path := filepath.Join(out, "engine.wasm")
+	started := time.Now()
+	command := exec.CommandContext(ctx, "go", "build", "-trimpath", "-buildvcs=false",
+		"-buildmode=c-shared", "-ldflags=-s -w -buildid=", "-o", path, "./web/engine")
+	command.Env = append(os.Environ(), "GOOS=wasip1", "GOARCH=wasm", "CGO_ENABLED=0")
+	if text, err := command.CombinedOutput(); err != nil {
+		return nil, fmt.Errorf("compile the engine: %w\n%s", err, text)
+	}
+	fmt.Printf("engine compiled in %.1f s\n", time.Since(started).Seconds())
+	return os.ReadFile(path)
+}
+
+// build bundles one entry with esbuild.
+func (b bundle) build() ([]byte, error) {
+	result := api.Build(api.BuildOptions{
+		EntryPoints:       []string{b.entry},
+		Bundle:            true,
+		Format:            api.FormatESModule,
+		Target:            api.ES2022,
+		MinifyWhitespace:  true,
+		MinifyIdentifiers: true,
+		MinifySyntax:      true,
+		LegalComments:     api.LegalCommentsNone,
+		Loader:            map[string]api.Loader{".svg": api.LoaderText, ".json": api.LoaderJSON},
+		NodePaths:         []string{"web/node_modules"},
+		Write:             false,
+		LogLevel:          api.LogLevelWarning,
+	})
+	if len(result.Errors) > 0 {
+		text := api.FormatMessages(result.Errors, api.FormatMessagesOptions{Kind: api.ErrorMessage})
+		return nil, fmt.Errorf("bundle %s:\n%s", b.entry, strings.Join(text, ""))
+	}
+	return result.OutputFiles[0].Contents, nil
+}
+
+// write stores an asset plain and compressed and describes it.
+func write(out, name, file, mediaType string, content []byte, level int) (web.Asset, error) {
+	var compressed bytes.Buffer
+	w := brotli.NewWriterLevel(&compressed, level)
+	if _, err := w.Write(content); err != nil {
+		return web.Asset{}, err
+	}
+	if err := w.Close(); err != nil {
+		return web.Asset{}, err
+	}
+	if err := os.WriteFile(filepath.Join(out, file), content, 0o644); err != nil {
+		return web.Asset{}, err
+	}
+	if err := os.WriteFile(filepath.Join(out, file+".br"), compressed.Bytes(), 0o644); err != nil {
+		return web.Asset{}, err
+	}
+	sum := sha256.Sum256(content)
+	fmt.Printf("%-16s %8d bytes, %7d with brotli\n", file, len(content), compressed.Len())
+	return web.Asset{
+		Name: name, File: file, MediaType: mediaType,
+		Digest:    hex.EncodeToString(sum[:]),
+		Integrity: "sha256-" + base64.StdEncoding.EncodeToString(sum[:]),
+		Bytes:     len(content), Brotli: compressed.Len(),
+	}, nil
+}
