@@ -60,12 +60,13 @@ func build(ctx context.Context, out string, quick bool) error {
 		level = brotli.DefaultCompression
 	}
 
+	before := readManifest(out)
 	var assets []web.Asset
 	engine, err := buildEngine(ctx, out)
 	if err != nil {
 		return err
 	}
-	asset, err := write(out, "engine", "engine.wasm", "application/wasm", engine, level)
+	asset, err := write(out, "engine", "engine.wasm", "application/wasm", engine, level, before)
 	if err != nil {
 		return err
 	}
@@ -76,7 +77,7 @@ func build(ctx context.Context, out string, quick bool) error {
 		if err != nil {
 			return err
 		}
-		asset, err := write(out, b.name, b.file, b.mediaType, text, level)
+		asset, err := write(out, b.name, b.file, b.mediaType, text, level, before)
 		if err != nil {
 			return err
 		}
@@ -127,27 +128,61 @@ func (b bundle) build() ([]byte, error) {
 }
 
 // write stores an asset plain and compressed and describes it.
-func write(out, name, file, mediaType string, content []byte, level int) (web.Asset, error) {
-	var compressed bytes.Buffer
-	w := brotli.NewWriterLevel(&compressed, level)
-	if _, err := w.Write(content); err != nil {
-		return web.Asset{}, err
-	}
-	if err := w.Close(); err != nil {
-		return web.Asset{}, err
+func write(out, name, file, mediaType string, content []byte, level int, before map[string]web.Asset) (web.Asset, error) {
+	sum := sha256.Sum256(content)
+	asset := web.Asset{
+		Name: name, File: file, MediaType: mediaType,
+		Digest:    hex.EncodeToString(sum[:]),
+		Integrity: "sha256-" + base64.StdEncoding.EncodeToString(sum[:]),
+		Bytes:     len(content),
 	}
 	if err := os.WriteFile(filepath.Join(out, file), content, 0o644); err != nil {
 		return web.Asset{}, err
 	}
-	if err := os.WriteFile(filepath.Join(out, file+".br"), compressed.Bytes(), 0o644); err != nil {
+	path := filepath.Join(out, file+".br")
+	// Compressing the engine takes seconds: keep it while the content is the same.
+	if old := before[name]; old.Digest == asset.Digest {
+		if info, err := os.Stat(path); err == nil && info.Size() == int64(old.Brotli) {
+			asset.Brotli = old.Brotli
+			return asset, nil
+		}
+	}
+	compressed, err := compress(content, level)
+	if err != nil {
 		return web.Asset{}, err
 	}
-	sum := sha256.Sum256(content)
-	fmt.Printf("%-16s %8d bytes, %7d with brotli\n", file, len(content), compressed.Len())
-	return web.Asset{
-		Name: name, File: file, MediaType: mediaType,
-		Digest:    hex.EncodeToString(sum[:]),
-		Integrity: "sha256-" + base64.StdEncoding.EncodeToString(sum[:]),
-		Bytes:     len(content), Brotli: compressed.Len(),
-	}, nil
+	if err := os.WriteFile(path, compressed, 0o644); err != nil {
+		return web.Asset{}, err
+	}
+	asset.Brotli = len(compressed)
+	fmt.Printf("%-16s %8d bytes, %7d with brotli\n", file, asset.Bytes, asset.Brotli)
+	return asset, nil
+}
+
+func compress(content []byte, level int) ([]byte, error) {
+	var compressed bytes.Buffer
+	w := brotli.NewWriterLevel(&compressed, level)
+	if _, err := w.Write(content); err != nil {
+		return nil, err
+	}
+	if err := w.Close(); err != nil {
+		return nil, err
+	}
+	return compressed.Bytes(), nil
+}
+
+// readManifest gives the assets of the last build, none if there was none.
+func readManifest(out string) map[string]web.Asset {
+	before := map[string]web.Asset{}
+	text, err := os.ReadFile(filepath.Join(out, "manifest.json"))
+	if err != nil {
+		return before
+	}
+	var list []web.Asset
+	if json.Unmarshal(text, &list) == nil {
+		for _, a := range list {
+			before[a.Name] = a
+		}
+	}
+	return before
 }
