@@ -1,0 +1,96 @@
+package procedure
+
+import "strconv"
+
+// Problem is a setting that cannot work.
+type Problem struct {
+	Key     string // in study files
+	Message string
+}
+
+// Check lists the settings of s that cannot work, with the reason.
+func Check(s Spec) []Problem {
+	var list []Problem
+	add := func(key, message string) { list = append(list, Problem{key, message}) }
+	if s.Min >= s.Max {
+		add("min", "min must be below max")
+	}
+	if s.Scale == Log10 && s.Min <= 0 {
+		add("min", "levels on a log10 scale must be above 0")
+	}
+	if s.MinTrials > s.MaxTrials {
+		add("min_trials", "min_trials is above max_trials")
+	}
+	switch s.Method {
+	case Constant:
+		checkConstant(s, add)
+	case Staircase:
+		checkStaircase(s, add)
+	case QuestPlus:
+		checkQuestPlus(s, add)
+	}
+	return list
+}
+
+func checkConstant(s Spec, add func(key, message string)) {
+	if len(s.Levels) == 0 {
+		add("levels", "the method of constant stimuli needs levels")
+	}
+	if s.Repetition < 1 {
+		add("repetitions", "give the number of trials per level")
+	}
+	for _, x := range s.Levels {
+		if x < s.Min || x > s.Max {
+			add("levels", number(x)+" is outside min to max")
+		}
+	}
+}
+
+func checkStaircase(s Spec, add func(key, message string)) {
+	for _, step := range s.StepsUp {
+		if step <= 0 {
+			add("steps", "steps must be above 0")
+		}
+	}
+	if s.Down > 1 && s.Up > 1 {
+		add("up", "either up or down must be 1: with both above 1 the track has no single convergence point (Levitt 1971)")
+	}
+	if s.EasierIs == 0 {
+		add("easier_is", "it is +1 or −1")
+	}
+	if s.Start < s.Min || s.Start > s.Max {
+		add("start", "the first level "+number(s.Start)+" is outside min to max")
+	}
+	if s.Reversals > 0 && s.Discard >= s.Reversals {
+		add("discard", "all reversals would be discarded")
+	}
+	// Mean movement is zero where p^down/(1−p^down) = up step/down step
+	// (García-Pérez 1998); a target at or below guessing is never left.
+	if target := Target(s); target <= s.Guess {
+		add("step_ratio", "the track would converge at "+number(100*target)+" % correct, which guessing reaches: use more right answers in a row (down) or a smaller step_ratio")
+	} else if target > 0.99 {
+		add("step_ratio", "the track would converge at "+number(100*target)+" % correct, which lapses make unreachable: use fewer right answers in a row or a larger step_ratio")
+	}
+}
+
+func checkQuestPlus(s Spec, add func(key, message string)) {
+	if s.ThresholdMin >= s.ThresholdMax {
+		add("threshold_min", "threshold_min must be below threshold_max")
+	}
+	if s.Scale == Log10 && s.ThresholdMin <= 0 {
+		add("threshold_min", "thresholds on a log10 scale must be above 0")
+	}
+	if s.ThresholdMax < s.Min || s.ThresholdMin > s.Max {
+		add("threshold_min", "no threshold considered lies within the levels from min to max")
+	}
+	for _, lapse := range s.Lapses {
+		if lapse+s.Guess >= 1 {
+			add("lapses", "guess and lapse together reach 1: the function would be flat")
+		}
+	}
+	if cells := s.ThresholdCount * len(s.Slopes) * len(s.Lapses) * s.LevelCount; cells > 4_000_000 {
+		add("threshold_count", "thresholds × slopes × lapses × levels are "+strconv.Itoa(cells)+" cells: at most 4 000 000 keep a trial's update short")
+	}
+}
+
+func number(x float64) string { return strconv.FormatFloat(x, 'g', 5, 64) }

@@ -1,0 +1,21 @@
+package procedure
+
+import "distal/experiments/random"
+
+var (
+	_ Procedure = (*constant)(nil)
+	_ Procedure = (*staircase)(nil)
+	_ Procedure = (*questPlus)(nil)
+)
+
+// New starts a track. The stream is used by methods that shuffle. s must have
+// passed Check.
+func New(s Spec, stream random.Stream) Procedure {
+	switch s.Method {
+	case Staircase:
+		return newStaircase(s)
+	case QuestPlus:
+		return newQuestPlus(s)
+	}
+	return newConstant(s, &stream)
+}

@@ -1,0 +1,542 @@
+package study
+
+import (
+	"math"
+	"strconv"
+	"strings"
+
+	"distal/experiments/value"
+)
+
+// codec walks one mapping of a study. The same walk reads it (strictly, with
+// all problems), writes its canonical form, or describes it for the schema: a
+// key stands in one place only.
+type codec struct {
+	mode     mode
+	in       value.Value // reading: the mapping
+	path     string
+	known    []string // keys that the walk asked for
+	out      []value.Member
+	problems *Problems
+	schema   *Schema
+	language string // default language of plain sentences
+}
+
+type mode uint8
+
+const (
+	reading mode = iota
+	writing
+	describing
+)
+
+// num describes a number in a study file.
+type num struct {
+	Min, Max float64
+	Default  float64
+	Required bool
+	Whole    bool
+}
+
+// word describes a text in a study file.
+type word struct {
+	Required  bool
+	Default   string
+	MaxLength int                         // 0: 200
+	Check     func(s string) (bad string) // what is wrong, "" if nothing
+}
+
+func (c *codec) at(key string) string {
+	if c.path == "" {
+		return key
+	}
+	return c.path + "." + key
+}
+
+// problem reports something about the value v under key.
+func (c *codec) problem(key string, v value.Value, message string) {
+	offending := v.Raw
+	pos := v.Pos
+	if pos.Line == 0 {
+		pos = c.in.Pos
+	}
+	*c.problems = append(*c.problems, Problem{Pos: pos, Path: c.at(key), Offending: offending, Message: message})
+}
+
+// take gives the value under key when reading.
+func (c *codec) take(key string, required bool) (value.Value, bool) {
+	c.known = append(c.known, key)
+	v, ok := c.in.Get(key)
+	if ok && v.Kind == value.Null {
+		ok = false
+	}
+	if !ok && required {
+		pos := c.in.Pos
+		*c.problems = append(*c.problems, Problem{Pos: pos, Path: c.path, Message: "the key " + key + " is missing"})
+	}
+	return v, ok
+}
+
+func (c *codec) put(key string, v value.Value) {
+	c.out = append(c.out, value.Member{Key: key, Value: v})
+}
+
+// number walks a number.
+func (c *codec) number(key string, x *float64, rule num, doc string) {
+	switch c.mode {
+	case writing:
+		c.put(key, value.Number(*x))
+	case describing:
+		c.schema.number(key, rule, doc)
+	case reading:
+		*x = rule.Default
+		if v, ok := c.take(key, rule.Required); ok {
+			c.readNumber(key, v, x, rule)
+		}
+	}
+}
+
+func (c *codec) readNumber(key string, v value.Value, x *float64, rule num) {
+	if v.Kind == value.Text {
+		if n, unit, ok := quantityText(v.Str); ok {
+			c.problem(key, v, "a plain number is expected, the unit is in the key: write "+key+": "+n+" (if "+unit+" is that unit)")
+			return
+		}
+	}
+	switch {
+	case v.Kind != value.Numeric:
+		c.problem(key, v, "a number is expected, not "+value.KindNames[v.Kind])
+	case rule.Whole && v.Num != math.Floor(v.Num):
+		c.problem(key, v, "a whole number is expected")
+	case v.Num < rule.Min || v.Num > rule.Max || math.IsNaN(v.Num):
+		c.problem(key, v, formatNumber(v.Num)+" is out of range: it must be "+rangeText(rule.Min, rule.Max))
+	default:
+		*x = v.Num
+	}
+}
+
+func rangeText(low, high float64) string {
+	switch {
+	case math.IsInf(low, -1) && math.IsInf(high, 1):
+		return "any number"
+	case math.IsInf(high, 1):
+		return formatNumber(low) + " or more"
+	case math.IsInf(low, -1):
+		return formatNumber(high) + " or less"
+	}
+	return "from " + formatNumber(low) + " to " + formatNumber(high)
+}
+
+// whole walks a whole number.
+func (c *codec) whole(key string, n *int, rule num, doc string) {
+	rule.Whole = true
+	x := float64(*n)
+	c.number(key, &x, rule, doc)
+	if c.mode == reading {
+		*n = int(x)
+	}
+}
+
+// text walks a text.
+func (c *codec) text(key string, s *string, rule word, doc string) {
+	switch c.mode {
+	case writing:
+		c.put(key, value.String(*s))
+	case describing:
+		c.schema.text(key, rule, doc)
+	case reading:
+		*s = rule.Default
+		if v, ok := c.take(key, rule.Required); ok {
+			c.readText(key, v, s, rule)
+		}
+	}
+}
+
+func (c *codec) readText(key string, v value.Value, s *string, rule word) {
+	if v.Kind != value.Text {
+		c.problem(key, v, "text is expected, not "+value.KindNames[v.Kind]+" (put it in quotes if it is meant as text)")
+		return
+	}
+	limit := rule.MaxLength
+	if limit == 0 {
+		limit = 200
+	}
+	if len(v.Str) > limit {
+		c.problem(key, v, "the text has "+strconv.Itoa(len(v.Str))+" bytes: at most "+strconv.Itoa(limit)+" are allowed")
+		return
+	}
+	if rule.Required && strings.TrimSpace(v.Str) == "" {
+		c.problem(key, v, "it must not be empty")
+		return
+	}
+	if rule.Check != nil && v.Str != "" {
+		if bad := rule.Check(v.Str); bad != "" {
+			c.problem(key, v, bad)
+			return
+		}
+	}
+	*s = v.Str
+}
+
+// flag walks a boolean.
+func (c *codec) flag(key string, b *bool, standard bool, doc string) {
+	switch c.mode {
+	case writing:
+		c.put(key, value.Bool(*b))
+	case describing:
+		c.schema.flag(key, standard, doc)
+	case reading:
+		*b = standard
+		if v, ok := c.take(key, false); ok {
+			if v.Kind != value.Boolean {
+				c.problem(key, v, "true or false is expected, not "+value.KindNames[v.Kind])
+				return
+			}
+			*b = v.Bool
+		}
+	}
+}
+
+// oneOf walks a choice among names; n is the index.
+func oneOf[T ~int](c *codec, key string, n *T, names []string, standard T, required bool, doc string) {
+	switch c.mode {
+	case writing:
+		if int(*n) >= 0 && int(*n) < len(names) {
+			c.put(key, value.String(names[*n]))
+		}
+	case describing:
+		c.schema.choice(key, names, required, doc)
+	case reading:
+		*n = standard
+		if v, ok := c.take(key, required); ok {
+			if i := c.index(key, v, names); i >= 0 {
+				*n = T(i)
+			}
+		}
+	}
+}
+
+// index finds the name in v, reporting what is not among names.
+func (c *codec) index(key string, v value.Value, names []string) int {
+	if v.Kind != value.Text {
+		c.problem(key, v, "one of "+strings.Join(names, ", ")+" is expected, not "+value.KindNames[v.Kind])
+		return -1
+	}
+	for i, n := range names {
+		if n == v.Str {
+			return i
+		}
+	}
+	message := quote(v.Str) + " is not known: "
+	if near := nearest(v.Str, names); near != "" {
+		message += "did you mean " + near + "?"
+	} else if len(names) == 0 {
+		message += "there are none to choose from"
+	} else {
+		message += "it can be " + strings.Join(names, ", ")
+	}
+	c.problem(key, v, message)
+	return -1
+}
+
+func quote(s string) string { return strconv.Quote(s) }
+
+// words walks a list of texts.
+func (c *codec) words(key string, list *[]string, doc string) {
+	switch c.mode {
+	case writing:
+		items := make([]value.Value, len(*list))
+		for i, s := range *list {
+			items[i] = value.String(s)
+		}
+		c.put(key, value.List(items...))
+	case describing:
+		c.schema.list(key, "string", false, doc)
+	case reading:
+		*list = nil
+		v, ok := c.take(key, false)
+		if !ok {
+			return
+		}
+		for _, item := range c.items(key, v) {
+			if item.Kind != value.Text {
+				c.problem(key, item, "text is expected, not "+value.KindNames[item.Kind])
+				continue
+			}
+			*list = append(*list, item.Str)
+		}
+	}
+}
+
+// numbers walks a list of numbers; a single number stands for a list of one.
+func (c *codec) numbers(key string, list *[]float64, rule num, doc string) {
+	switch c.mode {
+	case writing:
+		c.put(key, value.Numbers(*list))
+	case describing:
+		c.schema.list(key, "number", rule.Required, doc)
+	case reading:
+		*list = nil
+		v, ok := c.take(key, rule.Required)
+		if !ok {
+			return
+		}
+		for _, item := range c.items(key, v) {
+			x := math.NaN()
+			c.readNumber(key, item, &x, rule)
+			if !math.IsNaN(x) {
+				*list = append(*list, x)
+			}
+		}
+	}
+}
+
+// items gives the items of a list, or a single value as a list of one.
+func (c *codec) items(key string, v value.Value) []value.Value {
+	switch v.Kind {
+	case value.Sequence:
+		return v.Items
+	case value.Mapping:
+		c.problem(key, v, "a list is expected, not "+value.KindNames[v.Kind])
+		return nil
+	}
+	return []value.Value{v}
+}
+
+// sub opens the mapping v under key for reading.
+func (c *codec) sub(path string, v value.Value) *codec {
+	return &codec{mode: c.mode, in: v, path: path, problems: c.problems, language: c.language}
+}
+
+// group walks one mapping under key. Absent mappings are walked empty, so that defaults hold.
+func (c *codec) group(key string, required bool, doc string, walk func(*codec)) {
+	switch c.mode {
+	case writing:
+		inner := &codec{mode: writing}
+		walk(inner)
+		c.put(key, value.Object(inner.out...))
+	case describing:
+		inner := c.schema.group(key, required, doc)
+		walk(&codec{mode: describing, schema: inner})
+	case reading:
+		v, ok := c.take(key, required)
+		if ok && v.Kind != value.Mapping {
+			c.problem(key, v, "a group of keys is expected, not "+value.KindNames[v.Kind])
+			return
+		}
+		inner := c.sub(c.at(key), v)
+		if !ok {
+			if required {
+				return
+			}
+			inner.in = value.Value{Kind: value.Mapping, Pos: c.in.Pos}
+		}
+		walk(inner)
+		inner.finish()
+	}
+}
+
+// named walks a mapping from names to things, in the order written.
+func named[T any](c *codec, key string, list *[]T, name func(*T) *string, required bool, doc string, walk func(*codec, *T)) {
+	switch c.mode {
+	case writing:
+		members := make([]value.Member, len(*list))
+		for i := range *list {
+			inner := &codec{mode: writing}
+			walk(inner, &(*list)[i])
+			members[i] = value.Member{Key: *name(&(*list)[i]), Value: value.Object(inner.out...)}
+		}
+		// The order matters to some lists, and canonical members are sorted.
+		order := make([]value.Value, len(*list))
+		for i := range *list {
+			order[i] = value.String(*name(&(*list)[i]))
+		}
+		c.put(key, value.Object(members...))
+		c.put(key+"_order", value.List(order...))
+	case describing:
+		var t T
+		walk(&codec{mode: describing, schema: c.schema.named(key, required, doc)}, &t)
+	case reading:
+		v, ok := c.take(key, required)
+		order := c.order(key)
+		if !ok {
+			return
+		}
+		if v.Kind != value.Mapping {
+			c.problem(key, v, "names with a group of keys each are expected, not "+value.KindNames[v.Kind])
+			return
+		}
+		for _, m := range inOrder(v.Members, order) {
+			var t T
+			*name(&t) = m.Key
+			if bad := checkIdentifier(m.Key); bad != "" {
+				c.problem(key, value.Value{Pos: m.KeyPos, Raw: m.Key}, bad)
+			}
+			inner := c.sub(c.at(key)+"."+m.Key, m.Value)
+			if m.Value.Kind != value.Mapping {
+				c.problem(key, m.Value, "a group of keys is expected for "+m.Key+", not "+value.KindNames[m.Value.Kind])
+				continue
+			}
+			walk(inner, &t)
+			inner.finish()
+			*list = append(*list, t)
+		}
+	}
+}
+
+// order reads the order of a canonical mapping.
+func (c *codec) order(key string) []string {
+	var order []string
+	c.known = append(c.known, key+"_order")
+	if v, ok := c.in.Get(key + "_order"); ok {
+		for _, item := range v.Items {
+			order = append(order, item.Str)
+		}
+	}
+	return order
+}
+
+func inOrder(members []value.Member, order []string) []value.Member {
+	if len(order) != len(members) {
+		return members
+	}
+	sorted := make([]value.Member, 0, len(members))
+	for _, key := range order {
+		for i := range members {
+			if members[i].Key == key {
+				sorted = append(sorted, members[i])
+			}
+		}
+	}
+	if len(sorted) != len(members) {
+		return members
+	}
+	return sorted
+}
+
+// listed walks a list of mappings.
+func listed[T any](c *codec, key string, list *[]T, required bool, doc string, walk func(*codec, *T)) {
+	switch c.mode {
+	case writing:
+		items := make([]value.Value, len(*list))
+		for i := range *list {
+			inner := &codec{mode: writing}
+			walk(inner, &(*list)[i])
+			items[i] = value.Object(inner.out...)
+		}
+		c.put(key, value.List(items...))
+	case describing:
+		var t T
+		walk(&codec{mode: describing, schema: c.schema.listed(key, required, doc)}, &t)
+	case reading:
+		v, ok := c.take(key, required)
+		if !ok {
+			return
+		}
+		if v.Kind != value.Sequence {
+			c.problem(key, v, "a list (lines that begin with a hyphen) is expected, not "+value.KindNames[v.Kind])
+			return
+		}
+		for i, item := range v.Items {
+			path := c.at(key) + "[" + strconv.Itoa(i+1) + "]"
+			if item.Kind != value.Mapping {
+				c.problem(key, item, "a group of keys is expected, not "+value.KindNames[item.Kind])
+				continue
+			}
+			var t T
+			inner := c.sub(path, item)
+			walk(inner, &t)
+			inner.finish()
+			*list = append(*list, t)
+		}
+	}
+}
+
+// sentence walks a sentence that participants read: a text in the study's
+// first language, or a text per language.
+func (c *codec) sentence(key string, list *[]LocalText, required bool, doc string) {
+	switch c.mode {
+	case writing:
+		members := make([]value.Member, len(*list))
+		for i, t := range *list {
+			members[i] = value.Member{Key: t.Language, Value: value.String(t.Text)}
+		}
+		c.put(key, value.Object(members...))
+	case describing:
+		c.schema.sentence(key, required, doc)
+	case reading:
+		*list = nil
+		v, ok := c.take(key, required)
+		switch {
+		case !ok:
+		case v.Kind == value.Text:
+			*list = []LocalText{{Language: c.language, Text: v.Str}}
+		case v.Kind == value.Mapping:
+			for _, m := range v.Members {
+				if m.Value.Kind != value.Text {
+					c.problem(key, m.Value, "text is expected for language "+m.Key)
+					continue
+				}
+				*list = append(*list, LocalText{Language: m.Key, Text: m.Value.Str})
+			}
+		default:
+			c.problem(key, v, "text, or a text for each language, is expected")
+		}
+	}
+}
+
+// finish reports the keys that nobody asked for.
+func (c *codec) finish() {
+	if c.mode != reading {
+		return
+	}
+	for _, m := range c.in.Members {
+		if contains(c.known, m.Key) {
+			continue
+		}
+		message := wrongUnit(m.Key, c.known, m.Value.Num, m.Value.Kind == value.Numeric)
+		if message == "" {
+			message = "this key is not known here"
+			if near := nearest(m.Key, c.visible()); near != "" {
+				message += ": did you mean " + near + "?"
+			} else {
+				message += ": it can be " + strings.Join(c.visible(), ", ")
+			}
+		}
+		*c.problems = append(*c.problems, Problem{Pos: m.KeyPos, Path: c.at(m.Key), Offending: m.Key, Message: message})
+	}
+}
+
+// visible are the keys that people write.
+func (c *codec) visible() []string {
+	var keys []string
+	for _, k := range c.known {
+		if !strings.HasSuffix(k, "_order") {
+			keys = append(keys, k)
+		}
+	}
+	return keys
+}
+
+func contains(list []string, s string) bool {
+	for _, x := range list {
+		if x == s {
+			return true
+		}
+	}
+	return false
+}
+
+func checkIdentifier(s string) string {
+	if len(s) == 0 || len(s) > 40 {
+		return "a name has 1 to 40 characters"
+	}
+	for i := 0; i < len(s); i++ {
+		c := s[i]
+		if c >= 'a' && c <= 'z' || i > 0 && (c >= '0' && c <= '9' || c == '_' || c == '-') {
+			continue
+		}
+		return "a name has lower-case letters, digits, hyphens and underscores and begins with a letter: " + quote(s) + " does not"
+	}
+	return ""
+}
