@@ -1,5 +1,7 @@
 package run
 
+import "distal/experiments/display"
+
 // Step is what comes next in a run.
 type Step struct {
 	Kind     StepKind
@@ -56,4 +58,6 @@ type TrialPlan struct {
 	RampFrames     int
 	RefreshMs      float64
 	Feedback       bool // show right or wrong after this trial
+
+	values display.Values // all parameters of the display
 }
