@@ -94,8 +94,8 @@ func build(ctx context.Context, out string, quick bool) error {
 func buildEngine(ctx context.Context, out string) ([]byte, error) {
 	path := filepath.Join(out, "engine.wasm")
 	started := time.Now()
-	command := exec.CommandContext(ctx, "go", "build", "-trimpath", "-buildvcs=false",
-		"-buildmode=c-shared", "-ldflags=-s -w -buildid=", "-o", path, "./web/engine")
+	args := append([]string{"build", "-trimpath", "-buildvcs=false"}, web.EngineFlags...)
+	command := exec.CommandContext(ctx, "go", append(args, "-o", path, "./web/engine")...)
 	command.Env = append(os.Environ(), "GOOS=wasip1", "GOARCH=wasm", "CGO_ENABLED=0")
 	if text, err := command.CombinedOutput(); err != nil {
 		return nil, fmt.Errorf("compile the engine: %w\n%s", err, text)

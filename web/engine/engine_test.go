@@ -20,6 +20,7 @@ import (
 	"distal/experiments/run"
 	"distal/experiments/study"
 	"distal/experiments/value"
+	"distal/web"
 )
 
 // compileEngine builds the WebAssembly engine once.
@@ -30,7 +31,7 @@ var compileEngine = sync.OnceValues(func() ([]byte, error) {
 	}
 	defer os.RemoveAll(dir)
 	path := filepath.Join(dir, "engine.wasm")
-	command := exec.Command("go", "build", "-buildmode=c-shared", "-ldflags=-s -w", "-o", path, ".")
+	command := exec.Command("go", append(append([]string{"build"}, web.EngineFlags...), "-o", path, ".")...)
 	command.Env = append(os.Environ(), "GOOS=wasip1", "GOARCH=wasm", "CGO_ENABLED=0")
 	if text, err := command.CombinedOutput(); err != nil {
 		os.Stderr.Write(text)
