@@ -1,0 +1,141 @@
+package psychometric
+
+import "math"
+
+// startTable holds log P and log(1 − P) on a coarse grid of parameters, for levels
+// pooled into a few groups. It depends on the levels and not on the responses, so that
+// a problem with new responses (a bootstrap sample) gets its starting values for a few
+// multiplications.
+type startTable struct {
+	group  []int // of each level
+	groups int
+	cells  []startCell
+	// yes and no are [cell][group].
+	yes, no []float64
+	n, k    []float64
+	values  []float64
+}
+
+type startCell struct {
+	theta vector
+	row   int // cells of one row differ in threshold alone
+}
+
+// maxGroups of levels: pooling costs little at the grid's coarseness.
+const maxGroups = 12
+
+// startSpreads are the spreads tried, as shares of the tested range.
+var startSpreads = []float64{0.08, 0.25, 0.6, 1.2, 3}
+
+const startThresholds = 11 // from −0.75 to 0.75 ranges about the middle
+
+func (p *problem) prepareStarts() {
+	t := &p.start
+	t.group = make([]int, len(p.z))
+	center := p.pool()
+	lapses := []float64{p.low[iLapse]}
+	if p.free[iLapse] {
+		lapses = []float64{0.1 * p.high[iLapse], 0.6 * p.high[iLapse]}
+	}
+	for row, slope := range p.startSlopes() {
+		for _, lapse := range lapses {
+			q := p.model.offset(p.model.Criterion, lapse).q
+			for i := range startThresholds {
+				at := -0.75 + 1.5*float64(i)/(startThresholds-1)
+				theta := vector{at + q/math.Exp(slope), slope, lapse} // the location lies at at
+				t.cells = append(t.cells, startCell{theta, row})
+				p.tabulate(theta, center)
+			}
+		}
+	}
+	t.n = make([]float64, t.groups)
+	t.k = make([]float64, t.groups)
+	t.values = make([]float64, len(t.cells))
+}
+
+func (p *problem) startSlopes() []float64 {
+	if !p.free[iSlope] {
+		return []float64{p.low[iSlope]}
+	}
+	slopes := make([]float64, len(startSpreads))
+	for i, spread := range startSpreads {
+		slopes[i] = math.Log(p.model.Shape.width() / spread)
+	}
+	return slopes
+}
+
+// pool assigns every level to a group and returns the groups' middles.
+func (p *problem) pool() []float64 {
+	t := &p.start
+	var center []float64
+	weight, last := 0.0, math.Inf(-1)
+	for i, z := range p.z {
+		far := z-last >= 1.0/maxGroups || math.IsInf(z, 0) || math.IsInf(last, 0)
+		if i == 0 || len(p.z) <= maxGroups || far {
+			center = append(center, 0)
+			weight, last = 0, z
+		}
+		g := len(center) - 1
+		t.group[i] = g
+		weight += p.n[i]
+		if math.IsInf(z, 0) {
+			center[g] = z
+		} else {
+			center[g] += (z - center[g]) * p.n[i] / weight
+		}
+	}
+	t.groups = len(center)
+	return center
+}
+
+func (p *problem) tabulate(theta vector, center []float64) {
+	beta, lapse := math.Exp(theta[iSlope]), theta[iLapse]
+	q := p.model.offset(p.model.Criterion, lapse).q
+	bottom := p.model.bottom(lapse)
+	rise := p.model.top(lapse) - bottom
+	for _, z := range center {
+		s := p.at(beta*(z-theta[iThreshold])+q, z)
+		p.start.yes = append(p.start.yes, math.Log(math.Max(bottom+rise*s.f, floor)))
+		p.start.no = append(p.start.no, math.Log(math.Max(lapse+rise*s.c, floor)))
+	}
+}
+
+// starts are the grid's best points: of the best thresholds of every slope, those that
+// are not worse than at the neighbouring slopes.
+func (p *problem) starts(list []vector) []vector {
+	t := &p.start
+	if t.cells == nil {
+		p.prepareStarts()
+	}
+	clear(t.n)
+	clear(t.k)
+	for i, g := range t.group {
+		t.n[g] += p.n[i]
+		t.k[g] += p.k[i]
+	}
+	rows := t.cells[len(t.cells)-1].row + 1
+	var best [8]int
+	for row := range rows {
+		best[row] = -1
+	}
+	for c := range t.cells {
+		v := 0.0
+		for g, n := range t.n {
+			i := c*t.groups + g
+			v += t.k[g]*t.yes[i] + (n-t.k[g])*t.no[i]
+		}
+		t.values[c] = v
+		if b := best[t.cells[c].row]; b < 0 || v > t.values[b] {
+			best[t.cells[c].row] = c
+		}
+	}
+	for row := range rows {
+		v := t.values[best[row]]
+		better := row > 0 && t.values[best[row-1]] > v
+		better = better || row < rows-1 && t.values[best[row+1]] >= v
+		if !better {
+			list = append(list, t.cells[best[row]].theta)
+		}
+	}
+	return list
+}
