@@ -11,7 +11,7 @@ import (
 
 // Limits of what a record may hold.
 const (
-	maxFrames = 100_000 // of one stimulus: 7 minutes at 240 Hz
+	maxFrames = 100_000 // refresh intervals of one stimulus: 7 minutes at 240 Hz
 	maxList   = 1000
 	maxString = 20_000
 )
@@ -395,12 +395,14 @@ func EncodeSteps(steps []int) string {
 	return b.String()
 }
 
-// DecodeSteps reads what EncodeSteps wrote.
+// DecodeSteps reads what EncodeSteps wrote. All steps together may pass through
+// 100,000 refresh intervals at most, which bounds the work of re-creating them.
 func DecodeSteps(s string) ([]int, error) {
 	if s == "" {
 		return nil, nil
 	}
 	var steps []int
+	total := 0
 	for _, part := range strings.Split(s, " ") {
 		size, times, repeated := strings.Cut(part, "x")
 		step, err := strconv.Atoi(size)
@@ -413,9 +415,10 @@ func DecodeSteps(s string) ([]int, error) {
 				return nil, errors.New(strconv.Quote(part) + " is not a repeated step")
 			}
 		}
-		if len(steps)+n > maxFrames {
-			return nil, errors.New("there are too many steps")
+		if n > maxFrames || step*n > maxFrames-total {
+			return nil, errors.New("the steps pass through more than " + strconv.Itoa(maxFrames) + " refresh intervals")
 		}
+		total += step * n
 		for range n {
 			steps = append(steps, step)
 		}

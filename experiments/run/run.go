@@ -186,7 +186,7 @@ func (r *Run) Apply(rec *Record) error {
 	case KindEvent:
 		err = r.applyEvent(step, rec.Event)
 	case KindWithdrawal:
-		r.withdrawn = true
+		err = r.applyWithdrawal(step)
 	case KindRefusal:
 		err = r.applyRefusal(step, rec.Refusal)
 	default:
@@ -268,10 +268,22 @@ func (r *Run) applyStep(step Step, rec *Record) error {
 	return nil
 }
 
-// applyEvent notes what an event changes: another zoom or screen breaks the calibration.
+func (r *Run) applyWithdrawal(step Step) error {
+	if step.Kind == StepConsent || step.Kind == StepWithdrawn {
+		return errors.New("a withdrawal does not fit: the next step is " + StepKindNames[step.Kind])
+	}
+	r.withdrawn = true
+	return nil
+}
+
+// applyEvent notes what an event changes: another zoom or screen breaks the
+// calibration, as long as something is still to be shown.
 func (r *Run) applyEvent(step Step, e *Event) error {
-	if step.Kind == StepConsent {
-		return errors.New("an event cannot come before consent")
+	switch step.Kind {
+	case StepConsent, StepWithdrawn:
+		return errors.New("an event does not fit: the next step is " + StepKindNames[step.Kind])
+	case StepQuestions, StepDebrief, StepDone, StepRefused:
+		return nil
 	}
 	switch e.Name {
 	case "zoomed":
@@ -299,7 +311,7 @@ func (r *Run) applyTrial(p *TrialPlan, t *TrialRecord) error {
 		return errors.New("trial " + strconv.Itoa(t.Trial) + " is not the one that was planned: " + bad)
 	}
 	r.number++
-	r.next = nil
+	r.next, r.show.plan = nil, nil
 	if t.Interrupted != "" {
 		r.redo = p
 	} else {
@@ -325,12 +337,26 @@ func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {
 		return "the level differs"
 	case !sameValues(p, t):
 		return "the values differ"
-	case t.StimulusSteps != p.StimulusFrames || t.FixationSteps != p.FixationFrames:
-		return "the planned frames differ"
-	case t.Interrupted == "" && t.Correct != rightness(task, p, t.Response):
+	case t.RefreshMs != p.RefreshMs || t.StimulusSteps != p.StimulusFrames || t.FixationSteps != p.FixationFrames:
+		return "the refresh interval or the planned frames differ"
+	case t.Response != "" && choiceIndex(task, t.Response) < 0:
+		return "there is no choice " + strconv.Quote(t.Response)
+	case t.Correct != rightness(task, p, t.Response, t.Interrupted):
 		return "right or wrong differs"
+	case t.Dropped != dropped(t.Steps):
+		return "the dropped frames are not those of the frame steps"
 	}
 	return ""
+}
+
+// choiceIndex is the index of the choice called name, −1 if there is none.
+func choiceIndex(task *study.Task, name string) int {
+	for i := range task.Choices {
+		if task.Choices[i].Name == name {
+			return i
+		}
+	}
+	return -1
 }
 
 // sameNumber compares bit for bit, all NaN being the same.
@@ -349,9 +375,10 @@ func sameValues(p *TrialPlan, t *TrialRecord) bool {
 	return true
 }
 
-// rightness is 1 or 0, −1 where no answer is right. No answer is wrong in a catch trial, and tells nothing elsewhere.
-func rightness(task *study.Task, p *TrialPlan, response string) int {
-	if p.CorrectChoice < 0 || response == "" && !p.Catch {
+// rightness is 1 or 0, −1 where no answer is right and in interrupted trials.
+// No answer is wrong in a catch trial, and tells nothing elsewhere.
+func rightness(task *study.Task, p *TrialPlan, response, interrupted string) int {
+	if p.CorrectChoice < 0 || interrupted != "" || response == "" && !p.Catch {
 		return -1
 	}
 	if response == task.Choices[p.CorrectChoice].Name {

@@ -168,16 +168,20 @@ type Measurement struct {
 	Interrupted string
 }
 
-// FinishTrial joins the plan with what was measured to the trial's record.
+// FinishTrial joins the plan with what was measured to the trial's record; nil
+// if no trial has begun.
 func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 	p := r.show.plan
+	if p == nil {
+		return nil
+	}
 	spec := &r.study.Blocks[p.Block]
 	task := &r.study.Tasks[p.Task]
 	t := &TrialRecord{
 		Block: spec.Name, Trial: p.Number, Track: p.Track, Practice: p.Practice, Catch: p.Catch,
 		Task: task.Name, Display: r.study.Displays[p.Display].Name, Condition: p.Condition,
 		Keys: p.Keys, Values: p.Values, Level: p.Level, TruthKeys: r.show.keys, Truths: r.show.truths,
-		Response: m.Response, Correct: rightness(task, p, m.Response), ResponseMs: m.ResponseMs, Input: m.Input,
+		Response: m.Response, Correct: rightness(task, p, m.Response, m.Interrupted), ResponseMs: m.ResponseMs, Input: m.Input,
 		OnsetMs: m.OnsetMs, OffsetMs: m.OffsetMs, RefreshMs: p.RefreshMs,
 		FixationSteps: p.FixationFrames, StimulusSteps: p.StimulusFrames,
 		Steps: m.Steps, IntervalsMs: m.IntervalsMs, Digest: r.Digest(), Interrupted: m.Interrupted,
@@ -185,14 +189,18 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 	if m.Response == "" {
 		t.ResponseMs = math.NaN()
 	}
-	if m.Interrupted != "" {
-		t.Correct = -1
-	}
-	for _, n := range m.Steps {
-		t.Dropped += n - 1
-	}
+	t.Dropped = dropped(m.Steps)
 	t.JitterMs = jitter(m.Steps, m.IntervalsMs)
 	return t
+}
+
+// dropped is the number of refreshes without a frame of their own.
+func dropped(steps []int) int {
+	n := 0
+	for _, step := range steps {
+		n += step - 1
+	}
+	return n
 }
 
 // jitter is the standard deviation of the intervals that were not late.

@@ -91,6 +91,12 @@ func CheckDistance(s *study.Study, d *Distance) string {
 	return ""
 }
 
+// Refresh rates outside these are errors of measurement (common practice, no source).
+const (
+	minPlausibleHz = 10
+	maxPlausibleHz = 1000
+)
+
 // CheckDisplay gives the reason why a screen cannot show the study, "" if it can.
 // A twentieth of the refresh rate is allowed for, since screens are rarely at
 // their nominal rate (common practice, no source).
@@ -98,7 +104,7 @@ func CheckDisplay(s *study.Study, c *DisplayCheck) string {
 	screen := &s.Screen
 	hz := 1000 / c.RefreshMs
 	switch {
-	case c.Frames < 30 || math.IsNaN(hz):
+	case c.Frames < 30 || !(hz >= minPlausibleHz && hz <= maxPlausibleHz):
 		return ReasonNotMeasured
 	case hz < screen.MinRefreshHz*0.95:
 		return ReasonRefreshLow

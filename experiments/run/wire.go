@@ -3,6 +3,7 @@ package run
 import (
 	"errors"
 	"math"
+	"strconv"
 
 	"distal/experiments/study"
 	"distal/experiments/value"
@@ -36,9 +37,11 @@ func DecodeMeasurement(v value.Value) (Measurement, error) {
 		OnsetMs: f.numberOrNull("onset_ms"), OffsetMs: f.numberOrNull("offset_ms"),
 		IntervalsMs: f.numbers("intervals_ms"), Interrupted: f.text("interrupted"),
 	}
+	total := 0.0
 	for _, x := range f.numbers("frame_steps") {
-		if x < 1 || x > maxFrames || x != math.Floor(x) {
-			f.fail("frame_steps must be whole numbers from 1")
+		total += x
+		if !(x >= 1) || total > maxFrames || x != math.Floor(x) {
+			f.fail("frame_steps must be whole numbers from 1, " + strconv.Itoa(maxFrames) + " in all at most")
 			break
 		}
 		m.Steps = append(m.Steps, int(x))

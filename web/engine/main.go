@@ -178,6 +178,9 @@ func finishTrial(n int32) int32 {
 		return fail(err.Error())
 	}
 	rec := run.Record{Kind: run.KindTrial, Trial: state.FinishTrial(m)}
+	if rec.Trial == nil {
+		return fail("no trial has begun")
+	}
 	return give(rec.Encode())
 }
 
