@@ -172,9 +172,16 @@ func changed(t testing.TB, replacements ...string) *study.Study {
 	return readStudy(t, strings.NewReplacer(replacements...).Replace(motley))
 }
 
+// failer is what tests and properties have in common.
+type failer interface {
+	Helper()
+	Fatal(args ...any)
+	Fatalf(format string, args ...any)
+}
+
 // person drives a run by hand.
 type person struct {
-	t       testing.TB
+	t       failer
 	study   *study.Study
 	run     *run.Run
 	records []run.Record
@@ -316,7 +323,7 @@ func goodAnswers() *run.Answers {
 }
 
 // wire is the canonical text of a record.
-func wire(t testing.TB, v value.Value) string {
+func wire(t failer, v value.Value) string {
 	t.Helper()
 	text, err := value.Canonical(v)
 	if err != nil {

@@ -45,7 +45,8 @@ export interface Measurement {
   response: string | null;
   /** From stimulus onset. */
   rt_ms: number | null;
-  input: "keyboard" | "pointer" | "touch" | "";
+  /** keyboard, pointer, touch or "". */
+  input: string;
   onset_ms: number | null;
   offset_ms: number | null;
   /** Refresh intervals from each presented stimulus frame to the next, the last to the offset: whole numbers from 1. */
