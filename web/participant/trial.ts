@@ -1,0 +1,208 @@
+// One trial: fixation, stimulus, response. The frame callback makes no garbage:
+// times and steps go into arrays made beforehand; everything else happens
+// before or after the display.
+//
+// Onset is the frame clock's time of the frame that first showed the stimulus.
+// Light appears later than that, by compositor and panel delay, which a browser
+// cannot measure.
+
+import { stepsBetween, type FrameClock } from "./clock.js";
+import type { DisplayList, Measurement, TrialPlan } from "./engine.js";
+
+export interface TaskTiming {
+  responseWindowMs: number; // from onset, 0: no limit
+  respondDuring: boolean;
+  choices: { name: string; keys: string[] }[];
+}
+
+/** What a trial shows and hears; replaceable in tests. */
+export interface Stage {
+  clock: FrameClock;
+  begin(): void;
+  fixation(): DisplayList;
+  frame(n: number): DisplayList;
+  draw(list: DisplayList | null): void;
+  lost(): boolean;
+  /** Shows the response buttons once answers count. */
+  awaitAnswer(show: boolean): void;
+}
+
+const maxFrames = 36_000; // 2.5 minutes at 240 Hz
+
+const times = new Float64Array(maxFrames);
+const steps = new Int32Array(maxFrames);
+
+const hundredth = (x: number): number => Math.round(x * 100) / 100;
+
+/** Reasons that break off a trial. */
+export type Interruption = "escape" | "hidden" | "focus_lost" | "fullscreen_left" | "resized" | "zoomed" | "context_lost";
+
+/** Listens for answers and interruptions while a trial runs. */
+export class TrialInput {
+  private readonly held = new Set<string>();
+  private active: Runner | null = null;
+
+  constructor(target: Window) {
+    target.addEventListener("keydown", (e) => {
+      const known = this.held.has(e.code);
+      this.held.add(e.code);
+      if (e.code === "Escape") this.active?.interrupt("escape");
+      else if (!e.repeat && !known && this.active?.answerKey(e.code, e.timeStamp)) e.preventDefault();
+    });
+    target.addEventListener("keyup", (e) => this.held.delete(e.code));
+    target.addEventListener("blur", () => {
+      this.held.clear();
+      this.active?.interrupt("focus_lost");
+    });
+    target.document.addEventListener("visibilitychange", () => {
+      if (target.document.hidden) this.active?.interrupt("hidden");
+    });
+  }
+
+  attach(runner: Runner | null): void {
+    this.active = runner;
+  }
+
+  interrupt(reason: Interruption): void {
+    this.active?.interrupt(reason);
+  }
+
+  answerButton(choice: number, e: PointerEvent | MouseEvent): void {
+    const kind = "pointerType" in e && e.pointerType === "touch" ? "touch" : "pointer";
+    this.active?.answer(choice, e.timeStamp, kind);
+  }
+}
+
+class Runner {
+  private frames = 0; // presented stimulus frames
+  private fixationLeft: number;
+  private shown = 0; // refresh intervals of the stimulus
+  private last = NaN;
+  private offset = NaN;
+  private handle = 0;
+  private response = -1;
+  private responseAt = NaN;
+  private input: Measurement["input"] = "";
+  private interrupted: Interruption | "" = "";
+  private ended = false;
+  private readonly tick = (now: number): void => this.onFrame(now);
+
+  constructor(private readonly stage: Stage, private readonly plan: TrialPlan, private readonly task: TaskTiming, private readonly done: (m: Measurement) => void) {
+    this.fixationLeft = plan.fixation_frames;
+  }
+
+  start(): void {
+    this.stage.begin();
+    this.handle = this.stage.clock.request(this.tick);
+  }
+
+  private onFrame(now: number): void {
+    if (this.ended) return;
+    if (this.stage.lost()) return this.interrupt("context_lost");
+    const n = Number.isNaN(this.last) ? 1 : stepsBetween(now - this.last, this.plan.refresh_ms);
+    const before = this.last;
+    this.last = now;
+    if (this.fixationLeft > 0) {
+      // The list is the same in every frame of the phase; drawing it again keeps the dither alive.
+      if (!Number.isNaN(before)) this.fixationLeft -= n;
+      if (this.fixationLeft > 0) {
+        this.stage.draw(this.stage.fixation());
+        this.handle = this.stage.clock.request(this.tick);
+        return;
+      }
+    }
+    if (Number.isNaN(this.offset)) this.onStimulus(now, n);
+    else this.stage.draw(this.stage.fixation());
+    this.settle(now);
+    if (!this.ended) this.handle = this.stage.clock.request(this.tick);
+  }
+
+  private onStimulus(now: number, n: number): void {
+    if (this.frames > 0) {
+      steps[this.frames - 1] = n;
+      this.shown += n;
+    }
+    times[this.frames] = now;
+    const over = this.shown >= this.plan.stimulus_frames || this.frames >= maxFrames - 1;
+    const answered = this.task.respondDuring && this.response >= 0;
+    if (this.frames > 0 && (over || answered)) {
+      this.offset = now;
+      this.stage.draw(this.stage.fixation());
+      this.stage.awaitAnswer(true);
+      return;
+    }
+    this.stage.draw(this.stage.frame(this.frames === 0 ? 0 : n));
+    this.frames++;
+    if (this.frames === 1 && this.task.respondDuring) this.stage.awaitAnswer(true);
+  }
+
+  /** Ends the trial when it is answered or the time is over. */
+  private settle(now: number): void {
+    if (this.ended || Number.isNaN(this.offset)) return;
+    const window = this.task.responseWindowMs;
+    if (this.response >= 0 || (window > 0 && now - times[0]! > window)) this.finish();
+  }
+
+  answerKey(code: string, at: number): boolean {
+    const choice = this.task.choices.findIndex((c) => c.keys.includes(code));
+    if (choice < 0) return false;
+    this.answer(choice, at, "keyboard");
+    return true;
+  }
+
+  /** Takes the first answer that counts: after onset, and after offset unless the task says otherwise. */
+  answer(choice: number, at: number, input: "keyboard" | "pointer" | "touch"): void {
+    if (this.response >= 0 || this.frames === 0 || at < times[0]!) return;
+    if (Number.isNaN(this.offset) && !this.task.respondDuring) return;
+    const window = this.task.responseWindowMs;
+    if (window > 0 && at - times[0]! > window) return;
+    this.response = choice;
+    this.responseAt = at;
+    this.input = input;
+  }
+
+  interrupt(reason: Interruption): void {
+    if (this.ended) return;
+    this.interrupted = reason;
+    // The stimulus leaves the screen at once, not with the next frame of the plan.
+    if (!this.stage.lost()) this.stage.draw(null);
+    if (this.frames > 0 && Number.isNaN(this.offset)) {
+      const now = this.stage.clock.now();
+      times[this.frames] = now;
+      steps[this.frames - 1] = stepsBetween(now - times[this.frames - 1]!, this.plan.refresh_ms);
+      this.offset = now;
+    }
+    this.finish();
+  }
+
+  private finish(): void {
+    this.ended = true;
+    this.stage.clock.cancel(this.handle);
+    this.stage.awaitAnswer(false);
+    const intervals: number[] = [];
+    for (let i = 0; i < this.frames; i++) intervals.push(hundredth(times[i + 1]! - times[i]!));
+    const answered = this.response >= 0 && this.interrupted === "";
+    this.done({
+      response: answered ? this.task.choices[this.response]!.name : null,
+      rt_ms: answered ? hundredth(this.responseAt - times[0]!) : null,
+      input: answered ? this.input : "",
+      onset_ms: this.frames > 0 ? hundredth(times[0]!) : null,
+      offset_ms: Number.isNaN(this.offset) ? null : hundredth(this.offset),
+      frame_steps: Array.from(steps.subarray(0, this.frames)),
+      intervals_ms: intervals,
+      interrupted: this.interrupted,
+    });
+  }
+}
+
+/** Runs one trial and gives what was measured. */
+export function runTrial(stage: Stage, input: TrialInput, plan: TrialPlan, task: TaskTiming): Promise<Measurement> {
+  return new Promise((resolve) => {
+    const runner = new Runner(stage, plan, task, (m) => {
+      input.attach(null);
+      resolve(m);
+    });
+    input.attach(runner);
+    runner.start();
+  });
+}
