@@ -43,42 +43,65 @@ func (p *problem) totals() (n, k float64) {
 	return n, k
 }
 
-// stepLimit is the best step: all levels below it at the lower asymptote, all above at
-// the upper, one level at it with a probability of its own.
-func (p *problem) stepLimit() limit {
-	best := limit{value: math.Inf(-1)}
+// candidate is the best step at one level.
+type candidate struct {
+	value float64
+	lapse float64
+	f     float64 // share of the rise at the level itself
+}
+
+// weighSteps fills p.steps with the best step at every finite level: all levels below it
+// at the lower asymptote, all above at the upper, the level itself with a probability of
+// its own. It returns the index of the best.
+func (p *problem) weighSteps() int {
 	from, to := p.finite()
-	for j := from; j < to; j++ {
-		lapse := p.stepLapse(j)
-		bottom, top := p.model.bottom(lapse), p.model.top(lapse)
-		at := clamp(p.k[j]/p.n[j], bottom, top)
-		l := logLikelihood(p.n[j], p.k[j], at, 1-at)
-		for i := range p.z {
-			if i < j {
-				l += logLikelihood(p.n[i], p.k[i], bottom, 1-bottom)
-			} else if i > j {
-				l += logLikelihood(p.n[i], p.k[i], top, 1-top)
+	best := from
+	n, k := p.totals()
+	var belowN, belowK float64
+	for j := range to {
+		n -= p.n[j]
+		k -= p.k[j]
+		if j >= from {
+			lapse := p.stepLapse(belowN, belowK, n, k)
+			bottom, top := p.model.bottom(lapse), p.model.top(lapse)
+			at := clamp(p.k[j]/p.n[j], bottom, top)
+			l := logLikelihood(p.n[j], p.k[j], at, 1-at)
+			l += logLikelihood(belowN, belowK, bottom, 1-bottom) + logLikelihood(n, k, top, lapse)
+			p.steps[j] = candidate{l, lapse, (at - bottom) / (top - bottom)}
+			if l > p.steps[best].value {
+				best = j
 			}
 		}
-		if l > best.value {
-			best = p.step(j, from, to, lapse, (at-bottom)/(top-bottom))
-			best.value = l
-		}
+		belowN += p.n[j]
+		belowK += p.k[j]
 	}
 	return best
 }
 
-// stepLapse is the best lapse rate for a step at level j.
-func (p *problem) stepLapse(j int) float64 {
-	wrong, n := 0.0, 0.0
-	for i := range p.z {
-		if i > j {
-			n += p.n[i]
-			wrong += p.n[i] - p.k[i]
-		} else if i < j && p.model.Symmetric {
-			n += p.n[i]
-			wrong += p.k[i]
+// stepLimit is the best step.
+func (p *problem) stepLimit() limit {
+	return p.step(p.weighSteps())
+}
+
+// peaks of the steps' likelihood within lead of value, the best few.
+func (p *problem) stepPeaks(value, lead float64, list []int) []int {
+	from, to := p.finite()
+	for j := from; j < to; j++ {
+		v := p.steps[j].value
+		peak := (j == from || v >= p.steps[j-1].value) && (j == to-1 || v > p.steps[j+1].value)
+		if peak && v > value-lead && len(list) < cap(list) {
+			list = append(list, j)
 		}
+	}
+	return list
+}
+
+// stepLapse is the best lapse rate for a step with these counts below and above it.
+func (p *problem) stepLapse(belowN, belowK, n, k float64) float64 {
+	wrong := n - k
+	if p.model.Symmetric {
+		n += belowN
+		wrong += belowK
 	}
 	if n == 0 {
 		return p.low[iLapse]
@@ -86,17 +109,19 @@ func (p *problem) stepLapse(j int) float64 {
 	return clamp(wrong/n, p.low[iLapse], p.high[iLapse])
 }
 
-// step gives parameters for a step at level j at which F = f; a level with F = 0 or 1
-// is one that the step does not touch.
-func (p *problem) step(j, from, to int, lapse, f float64) limit {
+// step describes the candidate at level j; a level with F = 0 or 1 is one that the step
+// does not touch.
+func (p *problem) step(j int) limit {
+	from, to := p.finite()
 	slope := p.high[iSlope]
 	beta := math.Exp(slope)
-	location := p.z[j] - p.model.Shape.Quantile(clamp(f, 1e-9, 1-1e-9))/beta
-	var l limit
+	c := p.steps[j]
+	location := p.z[j] - p.model.Shape.Quantile(clamp(c.f, 1e-9, 1-1e-9))/beta
+	l := limit{value: c.value}
 	low, high := j, j
-	if f <= 0 {
+	if c.f <= 0 {
 		high = min(j+1, to-1)
-	} else if f >= 1 {
+	} else if c.f >= 1 {
 		low = max(j-1, from)
 	}
 	if low < high {
@@ -104,8 +129,8 @@ func (p *problem) step(j, from, to int, lapse, f float64) limit {
 		l.between = [2]float64{p.z[low], p.z[high]}
 		location = (p.z[low] + p.z[high]) / 2
 	}
-	q := p.model.offset(p.model.Criterion, lapse).q
-	l.theta = p.clip(vector{location + q/beta, slope, lapse})
+	q := p.model.offset(p.model.Criterion, c.lapse).q
+	l.theta = p.clip(vector{location + q/beta, slope, c.lapse})
 	return l
 }
 
@@ -131,30 +156,40 @@ type summit struct {
 const (
 	// tie is the difference in L that counts as none.
 	tie = 1e-8
-	// nearStepSpread, in smallest gaps, is where a climb from near the step starts.
-	nearStepSpread = 0.5
+	// clearLead is the lead of L over the constant, and the distance from L to a step,
+	// beyond which no second maximum was found near these limits …
+	clearLead = 3.0
+	// fewLevels is the number of levels up to which that holds; an adaptive track with a
+	// trial or two at each of many levels can have a second maximum anywhere.
+	fewLevels = 12
+	// nearStepSpread, in smallest gaps, is where a climb from near a step starts.
+	nearStepSpread = 1.0
 )
 
-// summit finds the supremum from the grid's starts and from the step.
+// summit finds the supremum: climbs from the regression and from near the good steps
+// and, unless that settles it, from the grid's starts. With a free lapse rate every climb is
+// repeated with more lapses, because pairs of maxima at the two ends of its range are common.
 func (p *problem) summit() summit {
 	s := summit{maximum: maximum{value: math.Inf(-1)}}
-	var room [8]vector
-	for _, start := range p.starts(room[:0]) {
-		s.take(p.climb(start))
-	}
+	s.take(p, p.regression())
 	s.constant = p.constantLimit()
+	s.step = limit{value: math.Inf(-1)}
 	if p.free[iSlope] {
 		s.step = p.stepLimit()
-		if s.step.value > s.value-tie {
-			near := s.step.theta
-			spread := math.Max(nearStepSpread*p.smallestGap(), 2*steepest)
-			near[iSlope] = math.Min(math.Log(p.model.Shape.width()/spread), p.high[iSlope])
-			s.take(p.climb(near))
+		s.climbFromSteps(p)
+	}
+	if !s.converged || s.value < s.constant+clearLead || s.value < s.step.value+tie || len(p.z) > fewLevels {
+		var room [24]vector
+		for _, start := range p.starts(room[:0]) {
+			s.keep(p.climb(start))
 		}
-		if s.step.value > s.value-tie {
-			s.maximum = maximum{s.step.theta, s.step.value, true}
-			s.outcome = stepLike
-		}
+	}
+	if p.free[iSlope] && s.step.value > s.value-1 {
+		s.leaveStep(p)
+	}
+	if s.step.value > s.value-tie {
+		s.maximum = maximum{s.step.theta, s.step.value, true}
+		s.outcome = stepLike
 	}
 	if s.constant > s.value-tie {
 		s.value = math.Max(s.value, s.constant)
@@ -163,7 +198,42 @@ func (p *problem) summit() summit {
 	return s
 }
 
-func (s *summit) take(m maximum) {
+// climbFromSteps climbs from slopes a little below infinite.
+func (s *summit) climbFromSteps(p *problem) {
+	spread := math.Max(nearStepSpread*p.smallestGap(), 0.02)
+	slope := math.Min(math.Log(p.model.Shape.width()/spread), p.high[iSlope])
+	var room [6]int
+	for _, j := range p.stepPeaks(s.value, clearLead, room[:0]) {
+		near := p.step(j).theta
+		near[iSlope] = slope
+		s.take(p, near)
+	}
+}
+
+// leaveStep looks for a maximum at shallower slopes about the best step.
+func (s *summit) leaveStep(p *problem) {
+	for _, spread := range []float64{0.05, 0.15, 0.4} {
+		near := s.step.theta
+		near[iSlope] = math.Log(p.model.Shape.width() / spread)
+		s.take(p, near)
+	}
+}
+
+// take climbs from start, and again with another lapse rate if it is free.
+func (s *summit) take(p *problem, start vector) {
+	s.keep(p.climb(start))
+	if p.free[iLapse] {
+		low, extent := p.low[iLapse], p.high[iLapse]-p.low[iLapse]
+		if start[iLapse] < low+extent/2 {
+			start[iLapse] = low + 0.7*extent
+		} else {
+			start[iLapse] = low + 0.1*extent
+		}
+		s.keep(p.climb(start))
+	}
+}
+
+func (s *summit) keep(m maximum) {
 	if m.value > s.value {
 		s.maximum = m
 	}

@@ -8,7 +8,8 @@ func (r *Result) information(p *problem, s *summit) {
 	if s.outcome != interior {
 		return
 	}
-	d := p.differentiate(s.theta)
+	var d derivatives
+	p.differentiate(s.theta, &d)
 	active := p.active(s.theta, &d.gradient)
 	if expected, ok := invert(&d.expected, active); ok {
 		r.Covariance = p.natural(expected, s.theta)

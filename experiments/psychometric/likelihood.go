@@ -26,17 +26,18 @@ type problem struct {
 	low, high vector
 
 	start startTable
+	steps []candidate
 }
 
-// floor keeps logarithms finite where a probability underflows.
-const floor = 1e-300
+// floor keeps logarithms and squared reciprocals finite where a probability underflows.
+const floor = 1e-150
 
 // newProblem prepares the likelihood of merged data under a checked model.
 func newProblem(d Data, m Model) *problem {
 	p := &problem{model: m, width: 1}
-	p.z = make([]float64, len(d))
-	p.n = make([]float64, len(d))
-	p.k = make([]float64, len(d))
+	room := make([]float64, 3*len(d))
+	p.z, p.n, p.k = room[:len(d):len(d)], room[len(d):2*len(d):2*len(d)], room[2*len(d):]
+	p.steps = make([]candidate, len(d))
 	for i, l := range d {
 		at := i
 		if m.Falling {
@@ -142,10 +143,10 @@ func (p *problem) at(u, z float64) standard {
 func logLikelihood(n, k, yes, no float64) float64 {
 	l := 0.0
 	if k > 0 {
-		l += k * math.Log(math.Max(yes, floor))
+		l = k * math.Log(max(yes, floor))
 	}
 	if n > k {
-		l += (n - k) * math.Log(math.Max(no, floor))
+		l += (n - k) * math.Log(max(no, floor))
 	}
 	return l
 }
@@ -159,9 +160,10 @@ type derivatives struct {
 	observed matrix
 }
 
-// differentiate is L with its first and second derivatives at θ.
-func (p *problem) differentiate(theta vector) derivatives {
-	var d derivatives
+// differentiate sets d to L and its first and second derivatives at θ; those by the lapse
+// rate are 0 unless it is free.
+func (p *problem) differentiate(theta vector, d *derivatives) {
+	*d = derivatives{}
 	beta, lapse := math.Exp(theta[iSlope]), theta[iLapse]
 	q := p.model.offset(p.model.Criterion, lapse)
 	bottom := p.model.bottom(lapse)
@@ -172,47 +174,57 @@ func (p *problem) differentiate(theta vector) derivatives {
 		if s.d == 0 {
 			v = 0 // the product with a far or infinite level is 0, not undefined
 		}
-		yes := math.Max(bottom+rise*s.f, floor)
-		no := math.Max(lapse+rise*s.c, floor)
+		yes := max(bottom+rise*s.f, floor)
+		no := max(lapse+rise*s.c, floor)
 		d.value += logLikelihood(p.n[i], p.k[i], yes, no)
-		first, second := p.slopesOfP(s, beta, v, rise, q)
-		d.add(p.n[i], p.k[i], yes, no, &first, &second)
-	}
-	d.mirror()
-	return d
-}
-
-// slopesOfP are the first and (upper triangle) second derivatives of P by θ.
-func (p *problem) slopesOfP(s standard, beta, v, rise float64, q quantile) (vector, matrix) {
-	dRise, dBottom := -1.0, 0.0
-	if p.model.Symmetric {
-		dRise, dBottom = -2, 1
-	}
-	d, e := rise*s.d, rise*s.e
-	first := vector{-d * beta, d * v, dBottom + dRise*s.f + d*q.dq}
-	var second matrix
-	second[0][0] = e * beta * beta
-	second[0][1] = -beta * (e*v + d)
-	second[0][2] = -beta * (dRise*s.d + e*q.dq)
-	second[1][1] = e*v*v + d*v
-	second[1][2] = v * (dRise*s.d + e*q.dq)
-	second[2][2] = 2*dRise*s.d*q.dq + e*q.dq*q.dq + d*q.ddq
-	return first, second
-}
-
-// add one level's part. Ratios to P and 1 − P are formed first so that nothing overflows.
-func (d *derivatives) add(n, k, yes, no float64, first *vector, second *matrix) {
-	toYes, toNo := 1/yes, 1/no
-	for a := range 3 {
-		ya, na := first[a]*toYes, first[a]*toNo
-		d.gradient[a] += k*ya - (n-k)*na
-		for b := a; b < 3; b++ {
-			yb, nb := first[b]*toYes, first[b]*toNo
-			d.expected[a][b] += n * (ya*first[b] + na*first[b])
-			s := second[a][b]
-			d.observed[a][b] += k*(ya*yb-s*toYes) + (n-k)*(na*nb+s*toNo)
+		w := weigh(p.n[i], p.k[i], yes, no)
+		d.addFunction(w, rise*s.d, rise*s.e, beta, v)
+		if p.free[iLapse] {
+			d.addLapse(w, s, beta, v, rise, q, p.model.Symmetric)
 		}
 	}
+	d.mirror()
+}
+
+// weights turn derivatives of P into those of L: the score K/P − (N−K)/(1−P), its
+// negative derivative, and that derivative's expectation.
+type weights struct{ score, observed, expected float64 }
+
+func weigh(n, k, yes, no float64) weights {
+	a, b := k/yes, (n-k)/no
+	return weights{a - b, a/yes + b/no, n / yes / no}
+}
+
+// addFunction adds one level's part in threshold and slope; d and e are the first two
+// derivatives of P by u, and u_t = −β, u_s = v.
+func (d *derivatives) addFunction(w weights, d1, d2, beta, v float64) {
+	p0, p1 := -d1*beta, d1*v
+	d.gradient[0] += w.score * p0
+	d.gradient[1] += w.score * p1
+	d.expected[0][0] += w.expected * p0 * p0
+	d.expected[0][1] += w.expected * p0 * p1
+	d.expected[1][1] += w.expected * p1 * p1
+	d.observed[0][0] += w.observed*p0*p0 - w.score*d2*beta*beta
+	d.observed[0][1] += w.observed*p0*p1 + w.score*beta*(d2*v+d1)
+	d.observed[1][1] += w.observed*p1*p1 - w.score*v*(d2*v+d1)
+}
+
+// addLapse adds one level's part in the lapse rate.
+func (d *derivatives) addLapse(w weights, s standard, beta, v, rise float64, q quantile, symmetric bool) {
+	dRise, dBottom := -1.0, 0.0
+	if symmetric {
+		dRise, dBottom = -2, 1
+	}
+	d1, d2 := rise*s.d, rise*s.e
+	p0, p1, p2 := -d1*beta, d1*v, dBottom+dRise*s.f+d1*q.dq
+	mixed := dRise*s.d + d2*q.dq
+	d.gradient[2] += w.score * p2
+	d.expected[0][2] += w.expected * p0 * p2
+	d.expected[1][2] += w.expected * p1 * p2
+	d.expected[2][2] += w.expected * p2 * p2
+	d.observed[0][2] += w.observed*p0*p2 + w.score*beta*mixed
+	d.observed[1][2] += w.observed*p1*p2 - w.score*v*mixed
+	d.observed[2][2] += w.observed*p2*p2 - w.score*(2*dRise*s.d*q.dq+d2*q.dq*q.dq+d1*q.ddq)
 }
 
 func (d *derivatives) mirror() {

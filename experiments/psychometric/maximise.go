@@ -11,8 +11,9 @@ type maximum struct {
 
 const (
 	maxIterations = 200
-	// decrementTolerance bounds the gain in L that a further Newton step promises.
-	decrementTolerance = 1e-13
+	// decrementTolerance is the gain in L promised by a Newton step from which that step is
+	// the last: convergence being quadratic, what is left after it is far below rounding.
+	decrementTolerance = 1e-9
 )
 
 // longest steps in one iteration: threshold in ranges, ln slope, lapse rate.
@@ -23,35 +24,33 @@ var longestStep = vector{0.5, 1, 0.05}
 // observed information is not positive definite the expected one is used.
 func (p *problem) climb(start vector) maximum {
 	theta := p.clip(start)
-	d := p.differentiate(theta)
+	var room [2]derivatives
+	now, next := &room[0], &room[1]
+	p.differentiate(theta, now)
 	damping := 0.0
 	for range maxIterations {
-		active := p.active(theta, &d.gradient)
-		step, ok := newtonStep(&d, active, damping)
+		step, ok := newtonStep(now, p.active(theta, &now.gradient), damping)
 		if !ok {
-			return maximum{theta, d.value, false}
+			return maximum{theta, now.value, false}
 		}
-		gain := dot(step, d.gradient) / 2
+		gain := dot(step, now.gradient) / 2
 		if gain < decrementTolerance {
-			return maximum{theta, d.value, true}
+			return p.settle(theta, step, now.value, gain)
 		}
-		next, value, found := p.search(theta, shorten(step), d.value)
-		if !found {
-			// No ascent along a step that promises little: rounding. Otherwise bend towards the gradient.
-			if gain < 1e-9 {
-				return maximum{theta, d.value, true}
-			}
-			if damping = math.Max(10*damping, 1e-3); damping > 1e9 {
-				return maximum{theta, d.value, false}
-			}
+		if p.search(&theta, shorten(step), now, next) {
+			damping = 0
+			now, next = next, now
 			continue
 		}
-		damping = 0
-		theta = next
-		d = p.differentiate(theta)
-		d.value = math.Max(d.value, value)
+		// No ascent along a step that promises little: rounding. Otherwise bend towards the gradient.
+		if gain < 1e-9 {
+			return maximum{theta, now.value, true}
+		}
+		if damping = math.Max(10*damping, 1e-3); damping > 1e9 {
+			return maximum{theta, now.value, false}
+		}
 	}
-	return maximum{theta, d.value, false}
+	return maximum{theta, now.value, false}
 }
 
 func (p *problem) clip(theta vector) vector {
@@ -73,23 +72,33 @@ func (p *problem) active(theta vector, gradient *vector) [3]bool {
 	return active
 }
 
-// search halves the step until L rises.
-func (p *problem) search(theta, step vector, value float64) (vector, float64, bool) {
+// settle takes the last step.
+func (p *problem) settle(theta, step vector, value, gain float64) maximum {
+	for i := range theta {
+		theta[i] += step[i]
+	}
+	return maximum{p.clip(theta), value + math.Max(gain, 0), true}
+}
+
+// search halves the step until L rises, and moves theta there.
+func (p *problem) search(theta *vector, step vector, now, next *derivatives) bool {
 	for range 30 {
-		next := theta
-		for i := range next {
-			next[i] += step[i]
+		to := *theta
+		for i := range to {
+			to[i] += step[i]
 			step[i] /= 2
 		}
-		next = p.clip(next)
-		if next == theta {
-			return theta, value, false
+		to = p.clip(to)
+		if to == *theta {
+			return false
 		}
-		if v := p.value(next); v > value {
-			return next, v, true
+		p.differentiate(to, next)
+		if next.value > now.value {
+			*theta = to
+			return true
 		}
 	}
-	return theta, value, false
+	return false
 }
 
 func shorten(step vector) vector {

@@ -9,25 +9,24 @@ import "math"
 type startTable struct {
 	group  []int // of each level
 	groups int
-	cells  []startCell
+	cells  []vector
+	slopes int
 	// yes and no are [cell][group].
 	yes, no []float64
 	n, k    []float64
 	values  []float64
 }
 
-type startCell struct {
-	theta vector
-	row   int // cells of one row differ in threshold alone
-}
-
 // maxGroups of levels: pooling costs little at the grid's coarseness.
 const maxGroups = 12
 
 // startSpreads are the spreads tried, as shares of the tested range.
-var startSpreads = []float64{0.08, 0.25, 0.6, 1.2, 3}
+var startSpreads = []float64{0.05, 0.12, 0.25, 0.5, 1, 2.5}
 
-const startThresholds = 11 // from −0.75 to 0.75 ranges about the middle
+const startThresholds = 13 // from −0.75 to 0.75 ranges about the middle
+
+// startLapses are the lapse rates tried, as shares of their range, if they are free.
+var startLapses = []float64{0.1, 0.7}
 
 func (p *problem) prepareStarts() {
 	t := &p.start
@@ -35,15 +34,20 @@ func (p *problem) prepareStarts() {
 	center := p.pool()
 	lapses := []float64{p.low[iLapse]}
 	if p.free[iLapse] {
-		lapses = []float64{0.1 * p.high[iLapse], 0.6 * p.high[iLapse]}
+		lapses = lapses[:0]
+		for _, share := range startLapses {
+			lapses = append(lapses, p.low[iLapse]+share*(p.high[iLapse]-p.low[iLapse]))
+		}
 	}
-	for row, slope := range p.startSlopes() {
-		for _, lapse := range lapses {
-			q := p.model.offset(p.model.Criterion, lapse).q
+	slopes := p.startSlopes()
+	t.slopes = len(slopes)
+	for _, lapse := range lapses {
+		q := p.model.offset(p.model.Criterion, lapse).q
+		for _, slope := range slopes {
 			for i := range startThresholds {
 				at := -0.75 + 1.5*float64(i)/(startThresholds-1)
 				theta := vector{at + q/math.Exp(slope), slope, lapse} // the location lies at at
-				t.cells = append(t.cells, startCell{theta, row})
+				t.cells = append(t.cells, theta)
 				p.tabulate(theta, center)
 			}
 		}
@@ -100,8 +104,7 @@ func (p *problem) tabulate(theta vector, center []float64) {
 	}
 }
 
-// starts are the grid's best points: of the best thresholds of every slope, those that
-// are not worse than at the neighbouring slopes.
+// starts are the grid's local maxima in threshold and slope, for every lapse rate.
 func (p *problem) starts(list []vector) []vector {
 	t := &p.start
 	if t.cells == nil {
@@ -113,11 +116,6 @@ func (p *problem) starts(list []vector) []vector {
 		t.n[g] += p.n[i]
 		t.k[g] += p.k[i]
 	}
-	rows := t.cells[len(t.cells)-1].row + 1
-	var best [8]int
-	for row := range rows {
-		best[row] = -1
-	}
 	for c := range t.cells {
 		v := 0.0
 		for g, n := range t.n {
@@ -125,17 +123,29 @@ func (p *problem) starts(list []vector) []vector {
 			v += t.k[g]*t.yes[i] + (n-t.k[g])*t.no[i]
 		}
 		t.values[c] = v
-		if b := best[t.cells[c].row]; b < 0 || v > t.values[b] {
-			best[t.cells[c].row] = c
-		}
 	}
-	for row := range rows {
-		v := t.values[best[row]]
-		better := row > 0 && t.values[best[row-1]] > v
-		better = better || row < rows-1 && t.values[best[row+1]] >= v
-		if !better {
-			list = append(list, t.cells[best[row]].theta)
+	for c := range t.cells {
+		if t.peak(c) {
+			list = append(list, t.cells[c])
 		}
 	}
 	return list
+}
+
+// peak says whether no neighbour in threshold and slope has a higher value (or an equal
+// one earlier in order).
+func (t *startTable) peak(c int) bool {
+	column, row := c%startThresholds, c/startThresholds%t.slopes
+	for dr := -1; dr <= 1; dr++ {
+		for dc := -1; dc <= 1; dc++ {
+			if row+dr < 0 || row+dr >= t.slopes || column+dc < 0 || column+dc >= startThresholds {
+				continue
+			}
+			other := c + dr*startThresholds + dc
+			if t.values[other] > t.values[c] || t.values[other] == t.values[c] && other < c {
+				return false
+			}
+		}
+	}
+	return true
 }
