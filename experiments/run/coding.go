@@ -319,9 +319,9 @@ func (o *object) text(key, s string) *object { return o.put(key, value.String(s)
 
 func (o *object) flag(key string, b bool) *object { return o.put(key, value.Bool(b)) }
 
-// number writes NaN as null.
+// number writes NaN as null, and infinities too, for which JSON has no number.
 func (o *object) number(key string, x float64) *object {
-	if math.IsNaN(x) {
+	if math.IsNaN(x) || math.IsInf(x, 0) {
 		return o.put(key, value.Value{})
 	}
 	return o.put(key, value.Number(x))
