@@ -23,9 +23,6 @@ type Acknowledged struct {
 	CompletionCode string
 }
 
-// ErrBusy says that the server was stopped before the upload was committed.
-var ErrBusy = errors.New("the upload was not committed: send it again")
-
 // appendRequest is one upload waiting for its commit.
 type appendRequest struct {
 	lab, run uuid.UUID
@@ -119,17 +116,17 @@ func (s *Store) commitByLab(batch []*appendRequest) {
 	}
 }
 
-// commitTogether tries all at once; if the database refuses, each alone, so
-// that one bad upload harms no other.
+// commitTogether tries all at once; if the database refuses, each half by
+// itself, so that one bad upload harms no other and costs few commits.
 func (s *Store) commitTogether(lab uuid.UUID, requests []*appendRequest) {
 	ctx, cancel := context.WithTimeout(context.Background(), 30*time.Second)
 	defer cancel()
 	answers := make([]appendAnswer, len(requests))
 	err := s.InLab(ctx, lab, func(tx pgx.Tx) error { return appendAll(ctx, tx, lab, requests, answers) })
-	if err != nil && len(requests) > 1 {
-		for _, r := range requests {
-			s.commitTogether(lab, []*appendRequest{r})
-		}
+	if err != nil && len(requests) > 1 && !errors.Is(err, ErrBusy) {
+		half := len(requests) / 2
+		s.commitTogether(lab, requests[:half])
+		s.commitTogether(lab, requests[half:])
 		return
 	}
 	for i, r := range requests {
@@ -184,6 +181,10 @@ func appendAll(ctx context.Context, tx pgx.Tx, lab uuid.UUID, requests []*append
 	for i := range states {
 		byRun[states[i].ID] = &states[i]
 	}
+	stored, err := findStored(ctx, tx, byRun, requests)
+	if err != nil {
+		return err
+	}
 	var fresh rows
 	var changed []*state
 	studies := map[uuid.UUID]bool{}
@@ -194,7 +195,7 @@ func appendAll(ctx context.Context, tx pgx.Tx, lab uuid.UUID, requests []*append
 			continue
 		}
 		before := st.Sequence
-		if err := take(ctx, tx, st, r, &fresh); err != nil {
+		if err := take(st, r, stored, &fresh); err != nil {
 			answers[i].err = err
 			if st.Sequence == before {
 				continue
@@ -212,13 +213,50 @@ func appendAll(ctx context.Context, tx pgx.Tx, lab uuid.UUID, requests []*append
 	return write(ctx, tx, lab, &fresh, changed, studies)
 }
 
+// recordKey names a record.
+type recordKey struct {
+	run      uuid.UUID
+	sequence int
+}
+
+// findStored reads what is stored of the records that came again.
+func findStored(ctx context.Context, tx pgx.Tx, byRun map[uuid.UUID]*state, requests []*appendRequest) (map[recordKey]string, error) {
+	var ids []uuid.UUID
+	var sequences []int32
+	for _, r := range requests {
+		st := byRun[r.run]
+		for i := range r.records {
+			if st != nil && r.records[i].Sequence <= st.Sequence {
+				ids, sequences = append(ids, r.run), append(sequences, int32(r.records[i].Sequence))
+			}
+		}
+	}
+	if len(ids) == 0 {
+		return nil, nil
+	}
+	found, err := tx.Query(ctx, `
+		SELECT r.run_id, r.sequence, r.body
+		FROM records r JOIN unnest($1::uuid[], $2::integer[]) AS u (run_id, sequence) USING (run_id, sequence)`, ids, sequences)
+	if err != nil {
+		return nil, err
+	}
+	stored := map[recordKey]string{}
+	var key recordKey
+	var body string
+	_, err = pgx.ForEachRow(found, []any{&key.run, &key.sequence, &body}, func() error {
+		stored[key] = body
+		return nil
+	})
+	return stored, err
+}
+
 // take accepts the records of an upload that follow on what is stored.
-func take(ctx context.Context, tx pgx.Tx, st *state, r *appendRequest, fresh *rows) error {
+func take(st *state, r *appendRequest, stored map[recordKey]string, fresh *rows) error {
 	for i := range r.records {
 		rec := &r.records[i]
 		switch {
 		case rec.Sequence <= st.Sequence:
-			if err := compareStored(ctx, tx, st, rec, r.bodies[i]); err != nil {
+			if err := st.compare(rec, r.bodies[i], stored); err != nil {
 				return err
 			}
 			continue
@@ -233,21 +271,17 @@ func take(ctx context.Context, tx pgx.Tx, st *state, r *appendRequest, fresh *ro
 	return nil
 }
 
-// compareStored finds out whether a record that came again is the same. A
-// record of this very upload is not stored yet and has no row.
-func compareStored(ctx context.Context, tx pgx.Tx, st *state, rec *run.Record, body string) error {
+// compare finds out whether a record that came again is the same. A record of
+// this very upload is not stored yet.
+func (st *state) compare(rec *run.Record, body string, stored map[recordKey]string) error {
 	if st.Outcome == OutcomeWithdrawn {
-		return nil
+		return nil // deleted: nothing to compare with, and nothing to keep
 	}
-	var stored string
-	err := tx.QueryRow(ctx, `SELECT body FROM records WHERE run_id = $1 AND sequence = $2`, st.ID, rec.Sequence).Scan(&stored)
-	if errors.Is(err, pgx.ErrNoRows) {
+	before, found := stored[recordKey{st.ID, rec.Sequence}]
+	switch {
+	case !found:
 		return &Error{Invalid, "twice", fmt.Sprintf("record %d stands twice in one upload", rec.Sequence)}
-	}
-	if err != nil {
-		return err
-	}
-	if stored != body {
+	case before != body:
 		return &Error{Conflict, "other_record", fmt.Sprintf("record %d is stored with another content", rec.Sequence)}
 	}
 	return nil

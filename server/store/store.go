@@ -7,6 +7,9 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io"
+	"net"
+	"strings"
 	"time"
 
 	"github.com/google/uuid"
@@ -56,6 +59,10 @@ var (
 	ErrInvalid   = &Error{Kind: Invalid, Message: "invalid"}
 	ErrForbidden = &Error{Kind: Forbidden, Message: "not allowed"}
 )
+
+// ErrBusy says that the database or the server could not answer just now. What
+// was asked may or may not have been done; asking again is safe.
+var ErrBusy = errors.New("the database does not answer: try again")
 
 // Open connects to the database at url as the server's role.
 func Open(ctx context.Context, url string) (*Store, error) {
@@ -111,6 +118,8 @@ func interpret(err error) error {
 		return nil
 	case errors.Is(err, pgx.ErrNoRows):
 		return ErrNotFound
+	case unavailable(err):
+		return fmt.Errorf("%w: %w", ErrBusy, err)
 	case !errors.As(err, &pg):
 		return err
 	}
@@ -127,7 +136,27 @@ func interpret(err error) error {
 	case "42501": // insufficient_privilege
 		return ErrForbidden
 	}
+	if strings.HasPrefix(pg.Code, "22") { // data_exception: e.g. a NUL character in a text
+		return &Error{Invalid, "value", "the database cannot hold one of the values"}
+	}
 	return err
+}
+
+// unavailable tells whether err is a lost or refused connection, a server that
+// stops, or a conflict that the next attempt will not meet.
+func unavailable(err error) bool {
+	var pg *pgconn.PgError
+	if errors.As(err, &pg) {
+		switch pg.Code[:2] {
+		case "08", "40", "53", "57": // connection, rolled back, resources, operator intervention
+			return true
+		}
+		return false
+	}
+	var connecting *pgconn.ConnectError
+	var network net.Error
+	return errors.As(err, &connecting) || errors.As(err, &network) || errors.Is(err, io.EOF) || errors.Is(err, io.ErrUnexpectedEOF) ||
+		errors.Is(err, net.ErrClosed) || errors.Is(err, context.DeadlineExceeded) || pgconn.SafeToRetry(err)
 }
 
 func conflictMessage(constraint string) string {
