@@ -115,11 +115,11 @@ func (f *field) randomPlace() (x, y float64) {
 
 // fieldCount is the number of dots of a density in a circle or rectangle.
 func fieldCount(density float64, round bool, width, height float64) int {
-	area := width * height
+	area := float64(width * height)
 	if round {
-		area = exact.Pi / 4 * float64(width*width)
+		area = float64(exact.Pi / 4 * float64(width*width))
 	}
-	return int(exact.Round(density * area))
+	return int(exact.Round(float64(density * area)))
 }
 
 // checkCount reports a number of dots that a field cannot have.
