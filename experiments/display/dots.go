@@ -94,14 +94,14 @@ func checkDots(v Values, problem func(key, message string)) {
 
 // dotCount is the number of dots in a frame.
 func dotCount(v Values) int {
-	area := exact.Pi / 4 * float64(v.Num(dotsWidth)*v.Num(dotsWidth))
+	area := float64(exact.Pi / 4 * float64(v.Num(dotsWidth)*v.Num(dotsWidth)))
 	switch v.Choice(dotsAperture) {
 	case apertureAnnulus:
-		area -= exact.Pi / 4 * float64(v.Num(dotsInner)*v.Num(dotsInner))
+		area -= float64(exact.Pi / 4 * float64(v.Num(dotsInner)*v.Num(dotsInner)))
 	case apertureRectangle:
-		area = v.Num(dotsWidth) * v.Num(dotsHeight)
+		area = float64(v.Num(dotsWidth) * v.Num(dotsHeight))
 	}
-	return int(exact.Round(v.Num(dotsDensity) * area))
+	return int(exact.Round(float64(v.Num(dotsDensity) * area)))
 }
 
 // dots is a random-dot kinematogram. Dots of all sets lie behind one another:
@@ -161,7 +161,7 @@ func (d *dots) Begin(t Trial) {
 	d.life = random.NewSub(t.Seed, t.Number, random.PurposeLifetime, t.Place)
 	d.polarity = random.NewSub(t.Seed, t.Number, random.PurposePolarity, t.Place)
 
-	d.step = d.v.Num(dotsSpeed) * t.IntervalMs / 1000 * float64(d.sets)
+	d.step = float64(d.v.Num(dotsSpeed) * t.IntervalMs / 1000 * float64(d.sets))
 	d.dirSin, d.dirCos = exact.SinCos(exact.Radians(d.v.Num(dotsDirection)))
 	d.frame = 0
 	d.lifetime = 0
@@ -209,7 +209,7 @@ func (d *dots) drawSignal(s int) {
 		}
 		return
 	}
-	k := int(exact.Round(coherence * float64(d.n)))
+	k := int(exact.Round(float64(coherence * float64(d.n))))
 	order := d.order[from:to]
 	for i := range order {
 		order[i] = from + i
@@ -235,7 +235,7 @@ func (d *dots) countSignal(s int) int {
 // aim gives dot i its directions, as noise and as signal, for the rest of its life.
 func (d *dots) aim(i int) {
 	if d.v.Choice(dotsNoise) == noiseDirection {
-		d.sin[i], d.cos[i] = exact.SinCos(float64(2*exact.Pi) * d.noise.Float64())
+		d.sin[i], d.cos[i] = exact.SinCos(float64(float64(2*exact.Pi) * d.noise.Float64()))
 	}
 	if sd := d.v.Num(dotsBandwidth); sd > 0 {
 		angle := exact.Radians(d.v.Num(dotsDirection) + float64(sd*d.noise.Normal()))
@@ -252,7 +252,7 @@ func (d *dots) Step(n int, l *List) {
 	diameter := float32(d.v.Num(dotsDiameter))
 	contrast := float32(d.v.Num(dotsContrast))
 	for i := set * d.n; i < (set+1)*d.n; i++ {
-		l.AddDot(Dot{float32(d.centreX + d.x[i]), float32(d.centreY + d.y[i]), diameter, contrast * d.sign[i]})
+		l.AddDot(Dot{float32(d.centreX + d.x[i]), float32(d.centreY + d.y[i]), diameter, float32(contrast * d.sign[i])})
 	}
 }
 
@@ -292,7 +292,7 @@ func (d *dots) moveNoise(i int) {
 	case noisePosition:
 		d.x[i], d.y[i] = d.randomPlace()
 	case noiseWalk:
-		sin, cos := exact.SinCos(float64(2*exact.Pi) * d.noise.Float64())
+		sin, cos := exact.SinCos(float64(float64(2*exact.Pi) * d.noise.Float64()))
 		d.move(i, cos, sin)
 	default:
 		d.move(i, d.cos[i], d.sin[i])
@@ -328,9 +328,9 @@ func (d *dots) reenter(i int, cos, sin float64) {
 	half := math.Sqrt(max(0, float64(outer*outer)-float64(across*across)))
 	switch inner := d.v.Num(dotsInner) / 2; {
 	case along > half:
-		along -= 2 * half
+		along -= float64(2 * half)
 	case d.v.Choice(dotsAperture) == apertureAnnulus && math.Abs(across) < inner:
-		along += 2 * math.Sqrt(float64(inner*inner)-float64(across*across))
+		along += float64(2 * math.Sqrt(float64(inner*inner)-float64(across*across)))
 	}
 	d.x[i] = float64(along*cos) - float64(across*sin)
 	d.y[i] = float64(along*sin) + float64(across*cos)
@@ -365,8 +365,8 @@ func (d *dots) randomPlace() (x, y float64) {
 	}
 	for {
 		r := math.Sqrt(d.place.Range(float64(inner*inner), float64(w*w))) / 2
-		sin, cos := exact.SinCos(float64(2*exact.Pi) * d.place.Float64())
-		x, y = r*cos, r*sin
+		sin, cos := exact.SinCos(float64(float64(2*exact.Pi) * d.place.Float64()))
+		x, y = float64(r*cos), float64(r*sin)
 		if d.inside(x, y) { // rounding can put a dot a hair outside
 			return x, y
 		}

@@ -91,17 +91,17 @@ func (f *fields) Begin(t Trial) {
 // numbers whatever the spreads are, so that changing one does not shift another.
 func (f *fields) aim(p *field, i int, t Trial) {
 	s := random.NewSub(t.Seed, t.Number, random.PurposeNoise, subPlace(t, uint32(i)))
-	signal := int(exact.Round(f.v.Num(fieldsCoherence) * float64(len(p.x))))
+	signal := int(exact.Round(float64(f.v.Num(fieldsCoherence) * float64(len(p.x)))))
 	step := at(f.v[fieldsSpeeds], i) * t.IntervalMs / 1000
 	for j := range p.x {
 		direction := f.v.Num(fieldsDirection) + f.v[fieldsDirections][i] + float64(f.v.Num(fieldsDirectionSD)*s.Normal())
-		random := 360 * s.Float64()
+		random := float64(360 * s.Float64())
 		if j >= signal {
 			direction = random
 		}
-		own := step * exact.Exp(float64(exact.Ln2*f.v.Num(fieldsSpeedSD))*s.Normal())
+		own := float64(step * exact.Exp(float64(float64(exact.Ln2*f.v.Num(fieldsSpeedSD))*s.Normal())))
 		sin, cos := exact.SinCos(exact.Radians(direction))
-		p.vx[j], p.vy[j] = own*cos, own*sin
+		p.vx[j], p.vy[j] = float64(own*cos), float64(own*sin)
 	}
 }
 

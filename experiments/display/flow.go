@@ -128,7 +128,7 @@ func turn(w vector) turning {
 	sin, cos := exact.SinCos(angle)
 	var r turning
 	for i, unit := range [3]vector{{1, 0, 0}, {0, 1, 0}, {0, 0, 1}} {
-		column := vector{cos * unit.x, cos * unit.y, cos * unit.z}.plus(axis.cross(unit), sin).plus(axis, float64((1-cos)*axis.dot(unit)))
+		column := vector{float64(cos * unit.x), float64(cos * unit.y), float64(cos * unit.z)}.plus(axis.cross(unit), sin).plus(axis, float64((1-cos)*axis.dot(unit)))
 		switch i {
 		case 0:
 			r[0].x, r[1].x, r[2].x = column.x, column.y, column.z
@@ -198,7 +198,7 @@ func (f *flow) Begin(t Trial) {
 		f.lifetime = holdFrames(ms, t.IntervalMs)
 	}
 	f.n = int(f.v.Num(flowDots))
-	noisy := int(exact.Round(f.v.Num(flowNoise) * float64(f.n)))
+	noisy := int(exact.Round(float64(f.v.Num(flowNoise) * float64(f.n))))
 	for i := range f.dots[:f.n] {
 		d := &f.dots[i]
 		d.noise, d.age = i < noisy, 0
@@ -218,11 +218,11 @@ func (f *flow) observe(seconds float64) {
 	}
 	sinX, cosX := exact.SinCos(exact.Radians(f.v.Num(flowHeadingX)))
 	sinY, cosY := exact.SinCos(exact.Radians(f.v.Num(flowHeadingY)))
-	step := speed * seconds
-	f.move = vector{step * sinX * cosY, step * sinY, step * cosX * cosY}
+	step := float64(speed * seconds)
+	f.move = vector{float64(step * sinX * cosY), float64(step * sinY), float64(step * cosX * cosY)}
 	// The scene turns against gaze: to the left, downwards, clockwise.
 	f.rotation = turn(vector{
-		exact.Radians(f.v.Num(flowPitch)) * seconds, -exact.Radians(f.v.Num(flowYaw)) * seconds, -exact.Radians(f.v.Num(flowRoll)) * seconds,
+		float64(exact.Radians(f.v.Num(flowPitch)) * seconds), float64(-exact.Radians(f.v.Num(flowYaw)) * seconds), float64(-exact.Radians(f.v.Num(flowRoll)) * seconds),
 	})
 }
 
@@ -235,7 +235,7 @@ func (f *flow) build() {
 	case sceneGround:
 		f.normal, f.offset = vector{0, -1, 0}, 1
 	case scenePlane:
-		f.near, f.far = 0.01*f.near, 1e6
+		f.near, f.far = float64(0.01*f.near), 1e6
 	}
 }
 
@@ -244,13 +244,13 @@ func (f *flow) build() {
 func (f *flow) renew(d *flowDot) {
 	d.sin, d.cos = 0, 1
 	if d.noise {
-		d.sin, d.cos = exact.SinCos(float64(2*exact.Pi) * f.aim.Float64())
+		d.sin, d.cos = exact.SinCos(float64(float64(2*exact.Pi) * f.aim.Float64()))
 	}
 	for range 128 {
 		x, y := f.place.Range(-f.tanX, f.tanX), f.place.Range(-f.tanY, f.tanY)
 		depth := f.depth(x, y)
 		if depth >= f.near && depth <= f.far {
-			d.vector = vector{depth * x, depth * y, depth}
+			d.vector = vector{float64(depth * x), float64(depth * y), depth}
 			return
 		}
 	}
@@ -286,15 +286,15 @@ func (f *flow) buildObject(t Trial) {
 	f.objects = int(f.v.Num(flowObjectDots))
 	z := f.v.Num(flowObjectDistance)
 	x, y := exact.Radians(f.v.Num(flowObjectX)), exact.Radians(f.v.Num(flowObjectY))
-	f.middle = vector{z * exact.Tan(x), z * exact.Tan(y), z}
-	f.radius = z * exact.Tan(exact.Radians(f.v.Num(flowObjectSize)/2))
+	f.middle = vector{float64(z * exact.Tan(x)), float64(z * exact.Tan(y)), z}
+	f.radius = float64(z * exact.Tan(exact.Radians(f.v.Num(flowObjectSize)/2)))
 	seconds := t.IntervalMs / 1000
-	f.drift = vector{f.v.Num(flowObjectVX) * seconds, f.v.Num(flowObjectVY) * seconds, f.v.Num(flowObjectVZ) * seconds}
+	f.drift = vector{float64(f.v.Num(flowObjectVX) * seconds), float64(f.v.Num(flowObjectVY) * seconds), float64(f.v.Num(flowObjectVZ) * seconds)}
 	s := random.NewSub(t.Seed, t.Number, random.PurposeMask, t.Place)
 	for i := range f.object[:f.objects] {
-		r := f.radius * math.Sqrt(s.Float64())
-		sin, cos := exact.SinCos(float64(2*exact.Pi) * s.Float64())
-		f.object[i] = vector{r * cos, r * sin, 0}
+		r := float64(f.radius * math.Sqrt(s.Float64()))
+		sin, cos := exact.SinCos(float64(float64(2*exact.Pi) * s.Float64()))
+		f.object[i] = vector{float64(r * cos), float64(r * sin), 0}
 	}
 }
 
@@ -356,7 +356,7 @@ func (f *flow) astray(was vector, d *flowDot) vector {
 	dx, dy := d.x/d.z-x, d.y/d.z-y
 	x += float64(dx*d.cos) - float64(dy*d.sin)
 	y += float64(dx*d.sin) + float64(dy*d.cos)
-	return vector{x * d.z, y * d.z, d.z}
+	return vector{float64(x * d.z), float64(y * d.z), d.z}
 }
 
 func (f *flow) visible(p vector) bool {

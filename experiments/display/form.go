@@ -89,15 +89,15 @@ func (f *form) Begin(t Trial) {
 
 func (f *form) aim(p *field, t Trial, sub uint32, direction, speed float64) {
 	s := random.NewSub(t.Seed, t.Number, random.PurposeNoise, subPlace(t, sub))
-	signal := int(exact.Round(f.v.Num(formCoherence) * float64(len(p.x))))
+	signal := int(exact.Round(float64(f.v.Num(formCoherence) * float64(len(p.x)))))
 	step := speed * t.IntervalMs / 1000
 	for i := range p.x {
-		own, random := direction, 360*s.Float64()
+		own, random := direction, float64(360*s.Float64())
 		if i >= signal {
 			own = random
 		}
 		sin, cos := exact.SinCos(exact.Radians(own))
-		p.vx[i], p.vy[i] = step*cos, step*sin
+		p.vx[i], p.vy[i] = float64(step*cos), float64(step*sin)
 	}
 }
 
@@ -116,7 +116,7 @@ func (f *form) Step(n int, l *List) {
 func (f *form) centre() (x, y float64) {
 	x, y = f.v.Num(formX), f.v.Num(formY)
 	if f.v.Choice(formCarried) == 1 {
-		gone := f.v.Num(formFigureSpeed) * (float64(f.frame) * f.interval / 1000)
+		gone := float64(f.v.Num(formFigureSpeed) * (float64(f.frame) * f.interval / 1000))
 		sin, cos := exact.SinCos(exact.Radians(f.v.Num(formFigureDirection)))
 		x += float64(gone * cos)
 		y += float64(gone * sin)

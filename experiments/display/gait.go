@@ -37,7 +37,7 @@ var (
 func (h *harmonics) at(p float64) float64 {
 	angle := h.offset
 	for i := range h.cos {
-		s, c := exact.SinCos(float64(2*exact.Pi) * float64(i+1) * p)
+		s, c := exact.SinCos(float64(float64(2*exact.Pi) * float64(i+1) * p))
 		angle += float64(h.cos[i]*c) + float64(h.sin[i]*s)
 	}
 	return angle
@@ -87,7 +87,7 @@ func leg(p float64) (kneeForward, kneeUp, ankleForward, ankleUp float64) {
 	thigh := hipFlexion.at(p) - pelvisTilt.at(p)
 	shank := thigh - kneeFlexion.at(p)
 	s, c := exact.SinCos(exact.Radians(thigh))
-	kneeForward, kneeUp = thighLength*s, -thighLength*c
+	kneeForward, kneeUp = float64(thighLength*s), float64(-thighLength*c)
 	s, c = exact.SinCos(exact.Radians(shank))
 	return kneeForward, kneeUp, kneeForward + float64(shankLength*s), kneeUp - float64(shankLength*c)
 }
@@ -106,23 +106,23 @@ const (
 
 // walkerAt fills m with the markers at phase p, 0 at the right heel's contact.
 func walkerAt(p float64, m *[markerCount]point) {
-	bob := -bobOfStature * exact.Cos(float64(4*exact.Pi)*p)
+	bob := float64(-bobOfStature * exact.Cos(float64(float64(4*exact.Pi)*p)))
 	m[markerHead] = point{0, headCentre + bob, 0}
 	for side, first := range [2]int{markerShoulderR, markerShoulderL} {
 		phase, sign := p, 1.0
 		if side == 1 {
 			phase, sign = p+0.5, -1
 		}
-		swing := exact.Cos(float64(2*exact.Pi) * (phase + 0.5))
+		swing := exact.Cos(float64(float64(2*exact.Pi) * (phase + 0.5)))
 		arm := armMeanDeg + float64(armSwingDeg*swing)
 		fore := arm + elbowMeanDeg + float64(elbowSwingDeg*swing)
-		shoulder := point{0, shoulderHeight + bob, sign * shoulderHalf}
+		shoulder := point{0, shoulderHeight + bob, float64(sign * shoulderHalf)}
 		s, c := exact.SinCos(exact.Radians(arm))
-		elbow := point{upperArmLength * s, shoulder.up - float64(upperArmLength*c), shoulder.right}
+		elbow := point{float64(upperArmLength * s), shoulder.up - float64(upperArmLength*c), shoulder.right}
 		s, c = exact.SinCos(exact.Radians(fore))
 		wrist := point{elbow.forward + float64(forearmLength*s), elbow.up - float64(forearmLength*c), shoulder.right}
 
-		hip := point{0, hipHeight + bob, sign * hipHalf}
+		hip := point{0, hipHeight + bob, float64(sign * hipHalf)}
 		kneeForward, kneeUp, ankleForward, ankleUp := leg(phase)
 		m[first], m[first+1], m[first+2] = shoulder, elbow, wrist
 		m[first+3] = hip

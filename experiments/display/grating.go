@@ -71,7 +71,7 @@ func windowExtent(window int, width, height float64) (float64, float64) {
 	case WindowRect:
 		size = exact.Hypot(width, height)
 	case WindowGauss:
-		size *= 3 // cut at three standard deviations
+		size = float64(size * 3) // cut at three standard deviations
 	}
 	return size, size
 }
@@ -126,11 +126,11 @@ func radiansOfTurns(turns float64) float32 {
 func (g *grating) Step(n int, l *List) {
 	g.frame += n
 	step := g.frame / g.hold
-	moved := g.v.Num(gratingTemporal) * (float64(step*g.hold) * g.interval / 1000)
+	moved := float64(g.v.Num(gratingTemporal) * (float64(step*g.hold) * g.interval / 1000))
 	p := g.patch
 	if g.v.Choice(gratingMotion) == motionCounterphase {
 		p.PhaseRad = radiansOfTurns(g.turns)
-		p.Contrast *= float32(exact.Cos(float64(2*exact.Pi) * moved))
+		p.Contrast = float32(p.Contrast * float32(exact.Cos(float64(float64(2*exact.Pi)*moved))))
 	} else {
 		p.PhaseRad = radiansOfTurns(g.turns - moved)
 	}
@@ -141,7 +141,7 @@ func (g *grating) Step(n int, l *List) {
 }
 
 func (g *grating) Truths(add func(name string, value float64)) {
-	add("phase_at_onset_deg", 360*g.turns)
+	add("phase_at_onset_deg", float64(360*g.turns))
 	if g.v.Choice(gratingMotion) != motionCounterphase {
 		add("speed_deg_per_s", g.v.Num(gratingTemporal)/g.v.Num(gratingFrequency))
 	}

@@ -71,9 +71,9 @@ var structureKind = &Kind{
 		}
 	},
 	Extent: func(v Values) (float64, float64) {
-		size := v.Num(structureDiameter) * structureReach(v)
+		size := float64(v.Num(structureDiameter) * structureReach(v))
 		if d := v.Num(structureDistance); d > 0 {
-			size *= d / (d - structureReach(v))
+			size = float64(size * (d / (d - structureReach(v))))
 		}
 		return size + v.Num(structureDot), size + v.Num(structureDot)
 	},
@@ -117,21 +117,21 @@ func (s *structure) Begin(t Trial) {
 	s.place = random.NewSub(t.Seed, t.Number, random.PurposeDots, t.Place)
 	s.life = random.NewSub(t.Seed, t.Number, random.PurposeLifetime, t.Place)
 	s.radius = s.v.Num(structureDiameter) / 2
-	s.eye = s.v.Num(structureDistance) * s.radius
+	s.eye = float64(s.v.Num(structureDistance) * s.radius)
 	s.axisSin, s.axisCos = exact.SinCos(exact.Radians(s.v.Num(structureAxis) - 90))
 	slope := exact.Tan(exact.Radians(s.v.Num(structureSlant)))
 	sin, cos := exact.SinCos(exact.Radians(s.v.Num(structureTilt)))
-	s.tiltX, s.tiltY = slope*cos, slope*sin
+	s.tiltX, s.tiltY = float64(slope*cos), float64(slope*sin)
 	// A cap is nearest in its middle: curvature towards the viewer falls outwards.
-	sin, cos = exact.SinCos(exact.Pi / 2 * s.v.Num(structureIndex))
+	sin, cos = exact.SinCos(float64(exact.Pi / 2 * s.v.Num(structureIndex)))
 	curvedness := s.v.Num(structureCurvedness) / s.radius
-	s.k1, s.k2 = -curvedness*(sin+cos), -curvedness*(sin-cos)
+	s.k1, s.k2 = float64(-curvedness*(sin+cos)), float64(-curvedness*(sin-cos))
 	s.lifetime = 0
 	if ms := s.v.Num(structureLifetime); ms > 0 {
 		s.lifetime = holdFrames(ms, t.IntervalMs)
 	}
 	s.n = int(s.v.Num(structureDots))
-	s.noisy = int(exact.Round(s.v.Num(structureNoise) * float64(s.n)))
+	s.noisy = int(exact.Round(float64(s.v.Num(structureNoise) * float64(s.n))))
 	for i := range s.n {
 		s.point[i], s.age[i] = s.randomPoint(), 0
 		if s.lifetime > 0 {
@@ -142,27 +142,27 @@ func (s *structure) Begin(t Trial) {
 
 // randomPoint is uniform over the surface, of a patch over its outline.
 func (s *structure) randomPoint() vector {
-	turn := float64(2*exact.Pi) * s.place.Float64()
+	turn := float64(float64(2*exact.Pi) * s.place.Float64())
 	sin, cos := exact.SinCos(turn)
 	switch s.v.Choice(structureShape) {
 	case shapeSphere:
 		y := s.place.Range(-1, 1)
-		r := s.radius * math.Sqrt(1-float64(y*y))
-		return vector{r * sin, s.radius * y, r * cos}
+		r := float64(s.radius * math.Sqrt(1-float64(y*y)))
+		return vector{float64(r * sin), float64(s.radius * y), float64(r * cos)}
 	case shapeCylinder:
-		return vector{s.radius * sin, s.place.Range(-0.5, 0.5) * s.v.Num(structureHeight), s.radius * cos}
+		return vector{float64(s.radius * sin), float64(s.place.Range(-0.5, 0.5) * s.v.Num(structureHeight)), float64(s.radius * cos)}
 	}
-	r := s.radius * math.Sqrt(s.place.Float64())
-	x, y := r*cos, r*sin
+	r := float64(s.radius * math.Sqrt(s.place.Float64()))
+	x, y := float64(r*cos), float64(r*sin)
 	z := float64(s.tiltX*x) + float64(s.tiltY*y) + float64(s.k1*x*x/2) + float64(s.k2*y*y/2)
 	return vector{x, y, z}
 }
 
 // angle is how far the object has turned, in radians.
 func (s *structure) angle() float64 {
-	turned := exact.Radians(s.v.Num(structureRotation)) * (float64(s.frame) * s.interval / 1000)
+	turned := float64(exact.Radians(s.v.Num(structureRotation)) * (float64(s.frame) * s.interval / 1000))
 	if swing := exact.Radians(s.v.Num(structureSwing)); swing > minSwing {
-		return swing * exact.Sin(turned/swing)
+		return float64(swing * exact.Sin(turned/swing))
 	}
 	return turned
 }
@@ -183,7 +183,7 @@ func (s *structure) Step(n int, l *List) {
 		}
 		if s.eye > 0 {
 			scale := s.eye / (s.eye - z)
-			x, y = x*scale, y*scale
+			x, y = float64(x*scale), float64(y*scale)
 		}
 		l.AddDot(Dot{
 			float32(s.x + float64(x*s.axisCos) - float64(y*s.axisSin)), float32(s.y + float64(x*s.axisSin) + float64(y*s.axisCos)),

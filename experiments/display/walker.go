@@ -49,10 +49,10 @@ var walkerKind = &Kind{
 	Check: func(Values, func(key, message string)) {},
 	Extent: func(v Values) (float64, float64) {
 		// The widest pose spans 0.55 of stature, from wrist to ankle; scrambling keeps to that box.
-		width, height := 0.7*v.Num(walkerHeight), v.Num(walkerHeight)
+		width, height := float64(0.7*v.Num(walkerHeight)), v.Num(walkerHeight)
 		if v.Num(walkerMaskDots) > 0 {
-			width = max(width, v.Num(walkerMaskWidth)+0.5*v.Num(walkerHeight))
-			height = max(height, v.Num(walkerMaskHeight)+0.2*v.Num(walkerHeight))
+			width = max(width, v.Num(walkerMaskWidth)+float64(0.5*v.Num(walkerHeight)))
+			height = max(height, v.Num(walkerMaskHeight)+float64(0.2*v.Num(walkerHeight)))
 		}
 		return width, height
 	},
@@ -162,13 +162,13 @@ func (w *walker) drawMask(s random.Stream) {
 // right to the viewer's left by its cosine.
 func (w *walker) project(p point, sin, cos float64) (x, y float64) {
 	height := w.v.Num(walkerHeight)
-	x = height * (float64(p.forward*sin) - float64(p.right*cos))
-	return x, height * (p.up - 0.5) * w.flip
+	x = float64(height * (float64(p.forward*sin) - float64(p.right*cos)))
+	return x, float64(height * (p.up - 0.5) * w.flip)
 }
 
 // marker is marker m at a phase of the cycle.
 func (w *walker) marker(m int, phase float64) point {
-	at := (phase - math.Floor(phase)) * samples
+	at := float64((phase - math.Floor(phase)) * samples)
 	i := int(at)
 	share := at - float64(i)
 	a, b := &w.cycle[i%samples][m], &w.cycle[(i+1)%samples][m]
@@ -189,8 +189,8 @@ func (w *walker) Step(n int, l *List) {
 	}
 	for i := range w.mask[:w.masks] {
 		d := &w.mask[i]
-		x, y := w.project(w.marker(d.marker, d.phase+turn), d.side*math.Abs(w.sin), w.cos)
-		meanX, meanY := w.project(w.mean[d.marker], d.side*math.Abs(w.sin), w.cos)
+		x, y := w.project(w.marker(d.marker, d.phase+turn), float64(d.side*math.Abs(w.sin)), w.cos)
+		meanX, meanY := w.project(w.mean[d.marker], float64(d.side*math.Abs(w.sin)), w.cos)
 		l.AddDot(Dot{float32(w.x + x - meanX + d.x), float32(w.y + y - meanY + d.y), diameter, contrast})
 	}
 }

@@ -41,7 +41,7 @@ func Exp(x float64) float64 {
 	}
 	k := math.Floor(float64(invLn2*x) + 0.5)
 	hi := x - float64(k*ln2Hi)
-	lo := k * ln2Lo
+	lo := float64(k * ln2Lo)
 	return scale(expReduced(hi, lo), int(k))
 }
 
@@ -55,7 +55,7 @@ func expReduced(hi, lo float64) float64 {
 		p5 = 4.13813679705723846039e-08
 	)
 	r := hi - lo
-	t := r * r
+	t := float64(r * r)
 	c := r - float64(t*(p1+float64(t*(p2+float64(t*(p3+float64(t*(p4+float64(t*p5)))))))))
 	return 1 - ((lo - float64(r*c)/(2-c)) - hi)
 }
@@ -63,14 +63,14 @@ func expReduced(hi, lo float64) float64 {
 // scale is y × 2^k, in two steps so that subnormal results round once.
 func scale(y float64, k int) float64 {
 	for k > 1023 {
-		y *= math.Float64frombits(0x7FE0000000000000) // 2^1023
+		y = float64(y * math.Float64frombits(0x7FE0000000000000)) // 2^1023
 		k -= 1023
 	}
 	for k < -1022 {
-		y *= math.Float64frombits(0x0010000000000000) // 2^-1022
+		y = float64(y * math.Float64frombits(0x0010000000000000)) // 2^-1022
 		k += 1022
 	}
-	return y * math.Float64frombits(uint64(1023+k)<<52)
+	return float64(y * math.Float64frombits(uint64(1023+k)<<52))
 }
 
 // Log is the natural logarithm: −Inf at 0, NaN below.
@@ -98,19 +98,19 @@ func Log(x float64) float64 {
 		l7 = 1.479819860511658591e-01
 	)
 	s := f / (2 + f)
-	s2 := s * s
-	s4 := s2 * s2
-	t1 := s2 * (l1 + float64(s4*(l3+float64(s4*(l5+float64(s4*l7))))))
-	t2 := s4 * (l2 + float64(s4*(l4+float64(s4*l6))))
+	s2 := float64(s * s)
+	s4 := float64(s2 * s2)
+	t1 := float64(s2 * (l1 + float64(s4*(l3+float64(s4*(l5+float64(s4*l7)))))))
+	t2 := float64(s4 * (l2 + float64(s4*(l4+float64(s4*l6)))))
 	r := t1 + t2
-	hfsq := 0.5 * f * f
+	hfsq := float64(0.5 * f * f)
 	return float64(k*ln2Hi) - ((hfsq - (float64(s*(hfsq+r)) + float64(k*ln2Lo))) - f)
 }
 
 // split gives f and k with x = f × 2^k and √½ ≤ f < √2, for x > 0.
 func split(x float64) (f, k float64) {
 	if x < 0x1p-1022 {
-		x *= 0x1p54
+		x = float64(x * 0x1p54)
 		k = -54
 	}
 	bits := math.Float64bits(x)
@@ -124,7 +124,7 @@ func split(x float64) (f, k float64) {
 }
 
 // Log10 is the logarithm to base 10.
-func Log10(x float64) float64 { return Log(x) * (1 / Ln10) }
+func Log10(x float64) float64 { return float64(Log(x) * (1 / Ln10)) }
 
 // Log1p is log(1 + x), exact for small x (Kahan's correction of the rounding of 1 + x).
 func Log1p(x float64) float64 {
@@ -135,7 +135,7 @@ func Log1p(x float64) float64 {
 	if math.IsInf(u, 1) || u <= 0 {
 		return Log(u)
 	}
-	return Log(u) * (x / (u - 1))
+	return float64(Log(u) * (x / (u - 1)))
 }
 
 // Expm1 is exp(x) − 1, exact for small x.
@@ -144,7 +144,7 @@ func Expm1(x float64) float64 {
 		// Taylor series: 14 terms reach 2^-53 for |x| < 0.3.
 		sum := 0.0
 		for n := 15.0; n >= 2; n-- {
-			sum = (sum + 1) * (x / n)
+			sum = float64((sum + 1) * (x / n))
 		}
 		return float64(x*sum) + x
 	}
@@ -174,9 +174,9 @@ func Pow(x, y float64) float64 {
 	lo := (l - hi) + logResidual(x, l)
 	yHi := math.Float64frombits(math.Float64bits(y) &^ (1<<27 - 1))
 	yLo := y - yHi
-	main := yHi * hi
+	main := float64(yHi * hi)
 	rest := float64(yHi*lo) + float64(yLo*l)
-	return Exp(main) * (1 + Expm1(rest))
+	return float64(Exp(main) * (1 + Expm1(rest)))
 }
 
 // logResidual is log x − l for l ≈ log x, by one Newton step.
@@ -195,9 +195,9 @@ func powInt(x float64, n int) float64 {
 	r := 1.0
 	for ; n > 0; n >>= 1 {
 		if n&1 == 1 {
-			r *= x
+			r = float64(r * x)
 		}
-		x *= x
+		x = float64(x * x)
 	}
 	return r
 }
@@ -214,7 +214,7 @@ func Round(x float64) float64 {
 func Hypot(x, y float64) float64 { return math.Sqrt(float64(x*x) + float64(y*y)) }
 
 // Radians converts degrees.
-func Radians(deg float64) float64 { return deg * (Pi / 180) }
+func Radians(deg float64) float64 { return float64(deg * (Pi / 180)) }
 
 // Degrees converts radians.
-func Degrees(rad float64) float64 { return rad * (180 / Pi) }
+func Degrees(rad float64) float64 { return float64(rad * (180 / Pi)) }

@@ -49,7 +49,7 @@ func sinKernel(x float64) float64 {
 		s5 = -2.50507602534068634195e-08
 		s6 = 1.58969099521155010221e-10
 	)
-	z := x * x
+	z := float64(x * x)
 	p := s2 + float64(z*(s3+float64(z*(s4+float64(z*(s5+float64(z*s6)))))))
 	return x + float64(z*x*(s1+float64(z*p)))
 }
@@ -63,9 +63,9 @@ func cosKernel(x float64) float64 {
 		c5 = 2.08757232129817482790e-09
 		c6 = -1.13596475577881948265e-11
 	)
-	z := x * x
-	p := z * (c1 + float64(z*(c2+float64(z*(c3+float64(z*(c4+float64(z*(c5+float64(z*c6))))))))))
-	hz := 0.5 * z
+	z := float64(x * x)
+	p := float64(z * (c1 + float64(z*(c2+float64(z*(c3+float64(z*(c4+float64(z*(c5+float64(z*c6)))))))))))
+	hz := float64(0.5 * z)
 	w := 1 - hz
 	return w + ((1 - w - hz) + float64(z*p))
 }
@@ -112,10 +112,10 @@ func atanSeries(x float64) float64 {
 		a9  = -3.65315727442169155270e-02
 		a10 = 1.62858201153657823623e-02
 	)
-	z := x * x
-	w := z * z
-	s1 := z * (a0 + float64(w*(a2+float64(w*(a4+float64(w*(a6+float64(w*(a8+float64(w*a10))))))))))
-	s2 := w * (a1 + float64(w*(a3+float64(w*(a5+float64(w*(a7+float64(w*a9))))))))
+	z := float64(x * x)
+	w := float64(z * z)
+	s1 := float64(z * (a0 + float64(w*(a2+float64(w*(a4+float64(w*(a6+float64(w*(a8+float64(w*a10)))))))))))
+	s2 := float64(w * (a1 + float64(w*(a3+float64(w*(a5+float64(w*(a7+float64(w*a9)))))))))
 	return s1 + s2
 }
 

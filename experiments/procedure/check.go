@@ -67,9 +67,9 @@ func checkStaircase(s Spec, add func(key, message string)) {
 	// Mean movement is zero where p^down/(1−p^down) = up step/down step
 	// (García-Pérez 1998); a target at or below guessing is never left.
 	if target := Target(s); target <= s.Guess {
-		add("step_ratio", "the track would converge at "+number(100*target)+" % correct, which guessing reaches: use more right answers in a row (down) or a smaller step_ratio")
+		add("step_ratio", "the track would converge at "+number(float64(100*target))+" % correct, which guessing reaches: use more right answers in a row (down) or a smaller step_ratio")
 	} else if target > 0.99 {
-		add("step_ratio", "the track would converge at "+number(100*target)+" % correct, which lapses make unreachable: use fewer right answers in a row or a larger step_ratio")
+		add("step_ratio", "the track would converge at "+number(float64(100*target))+" % correct, which lapses make unreachable: use fewer right answers in a row or a larger step_ratio")
 	}
 }
 

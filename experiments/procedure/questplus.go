@@ -70,7 +70,7 @@ func (q *questPlus) tabulate() {
 			for _, slope := range q.spec.Slopes {
 				f := 0.0
 				if !math.IsInf(x, -1) {
-					f = -exact.Expm1(-exact.Exp10(slope * (x - t)))
+					f = -exact.Expm1(-exact.Exp10(float64(slope * (x - t))))
 				}
 				for _, lapse := range q.spec.Lapses {
 					q.right[i] = q.spec.Guess + float64((1-q.spec.Guess-lapse)*f)
@@ -119,7 +119,7 @@ func plogp(p float64) float64 {
 	if p <= 0 {
 		return 0
 	}
-	return -p * exact.Log(p)
+	return float64(-p * exact.Log(p))
 }
 
 // marginalEntropy is the expected entropy (nats) of the threshold's posterior
@@ -132,7 +132,7 @@ func (q *questPlus) marginalEntropy(i int) float64 {
 		a, b := 0.0, 0.0
 		for c := t * q.cells; c < (t+1)*q.cells; c++ {
 			p := q.posterior[c]
-			r := p * right[c]
+			r := float64(p * right[c])
 			a += r
 			b += p - r
 		}
@@ -164,9 +164,9 @@ func (q *questPlus) Record(outcome int) {
 	total := 0.0
 	for c := range q.posterior {
 		if outcome > 0 {
-			q.posterior[c] *= right[c]
+			q.posterior[c] = float64(q.posterior[c] * right[c])
 		} else {
-			q.posterior[c] *= 1 - right[c]
+			q.posterior[c] = float64(q.posterior[c] * (1 - right[c]))
 		}
 		total += q.posterior[c]
 	}

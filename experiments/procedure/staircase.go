@@ -103,7 +103,7 @@ func (t *staircase) move(direction int) {
 	t.direction = direction
 	step := t.spec.StepsUp[min(len(t.reversals), len(t.spec.StepsUp)-1)]
 	if direction < 0 {
-		step *= t.spec.StepRatio
+		step = float64(step * t.spec.StepRatio)
 	}
 	t.at = min(max(t.at+float64(float64(direction*t.spec.EasierIs)*step), t.low), t.high)
 }

@@ -100,7 +100,7 @@ func (s *Stream) Uint64() uint64 {
 }
 
 // Float64 is uniform over the multiples of 2⁻⁵³ in [0, 1).
-func (s *Stream) Float64() float64 { return float64(s.Uint64()>>11) * 0x1p-53 }
+func (s *Stream) Float64() float64 { return float64(float64(s.Uint64()>>11) * 0x1p-53) }
 
 // Range is uniform in [low, high).
 func (s *Stream) Range(low, high float64) float64 { return low + float64((high-low)*s.Float64()) }
@@ -132,7 +132,7 @@ func (s *Stream) Normal() float64 {
 		v := float64(2*s.Float64()) - 1
 		q := float64(u*u) + float64(v*v)
 		if q > 0 && q < 1 {
-			return u * math.Sqrt(-2*exact.Log(q)/q)
+			return float64(u * math.Sqrt(-2*exact.Log(q)/q))
 		}
 	}
 }

@@ -105,10 +105,10 @@ func (s *stage) ramp() {
 	}
 	gain := float32(0.5 * (1 - exact.Cos(exact.Pi*(float64(max(at, 0))+0.5)/float64(ramp))))
 	for i := range s.list.Dots {
-		s.list.Dots[i].Contrast *= gain
+		s.list.Dots[i].Contrast = float32(s.list.Dots[i].Contrast * gain)
 	}
 	for i := range s.list.Patches {
-		s.list.Patches[i].Contrast *= gain
+		s.list.Patches[i].Contrast = float32(s.list.Patches[i].Contrast * gain)
 	}
 }
 

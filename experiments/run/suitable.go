@@ -64,7 +64,7 @@ func CheckCard(s *study.Study, c *Card) string {
 	if math.Abs(density-c.PxPerMm) > 1e-9*density {
 		return ReasonNotMeasured
 	}
-	if device := density * c.PixelRatio; device < visual.MinDevicePxPerMm || device > visual.MaxDevicePxPerMm {
+	if device := float64(density * c.PixelRatio); device < visual.MinDevicePxPerMm || device > visual.MaxDevicePxPerMm {
 		return ReasonCardDensity
 	}
 	return ""

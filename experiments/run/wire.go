@@ -109,7 +109,7 @@ func calibrateDistance(s *study.Study, f *fields, o *object) {
 		return
 	}
 	if s.Screen.Distance == study.StatedDistance {
-		d.DistanceMm, d.SDMm = s.Screen.StatedDistanceMm, statedSpread*s.Screen.StatedDistanceMm
+		d.DistanceMm, d.SDMm = s.Screen.StatedDistanceMm, float64(statedSpread*s.Screen.StatedDistanceMm)
 	} else {
 		mean, sd := visual.MeanSD(d.OffsetsMm)
 		var eye float64

@@ -124,11 +124,11 @@ func (c *checker) display(d *DisplaySpec) {
 		return
 	}
 	width, height := d.Kind.Extent(d.Values)
-	if w := width + 2*math.Abs(d.XDeg); w > c.s.Screen.MinWidthDeg+1e-9 {
+	if w := width + float64(2*math.Abs(d.XDeg)); w > c.s.Screen.MinWidthDeg+1e-9 {
 		c.report(false, "display "+d.Name+" is "+formatNumber(w)+" deg wide about fixation, but the screen only has to manage "+
 			formatNumber(c.s.Screen.MinWidthDeg)+": raise screen.min_width_deg", "displays", d.Name)
 	}
-	if h := height + 2*math.Abs(d.YDeg); h > c.s.Screen.MinHeightDeg+1e-9 {
+	if h := height + float64(2*math.Abs(d.YDeg)); h > c.s.Screen.MinHeightDeg+1e-9 {
 		c.report(false, "display "+d.Name+" is "+formatNumber(h)+" deg high about fixation, but the screen only has to manage "+
 			formatNumber(c.s.Screen.MinHeightDeg)+": raise screen.min_height_deg", "displays", d.Name)
 	}

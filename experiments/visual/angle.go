@@ -12,7 +12,7 @@ import (
 // SizeDeg is the visual angle of an object of sizeMm centred on the line of
 // sight at distanceMm: 2 atan(s/2D).
 func SizeDeg(sizeMm, distanceMm float64) float64 {
-	return 2 * exact.Degrees(exact.Atan(sizeMm/(2*distanceMm)))
+	return float64(2 * exact.Degrees(exact.Atan(sizeMm/(2*distanceMm))))
 }
 
 // EccentricityDeg is the angle between the line of sight and a point offsetMm
@@ -23,7 +23,7 @@ func EccentricityDeg(offsetMm, distanceMm float64) float64 {
 
 // OffsetMm is the inverse of EccentricityDeg: D tan(e).
 func OffsetMm(eccentricityDeg, distanceMm float64) float64 {
-	return distanceMm * exact.Tan(exact.Radians(eccentricityDeg))
+	return float64(distanceMm * exact.Tan(exact.Radians(eccentricityDeg)))
 }
 
 // The ID-1 card (ISO/IEC 7810): 85.60 mm × 53.98 mm, corners of 2.88 to 3.48 mm radius.
@@ -53,7 +53,7 @@ const (
 func BlindSpotDistance(offsetMm float64) (distanceMm, sdMm float64) {
 	e := exact.Radians(BlindSpotDeg)
 	distanceMm = offsetMm / exact.Tan(e)
-	return distanceMm, distanceMm * 2 * exact.Radians(BlindSpotSDDeg) / exact.Sin(2*e)
+	return distanceMm, distanceMm * 2 * exact.Radians(BlindSpotSDDeg) / exact.Sin(float64(2*e))
 }
 
 // MeanSD gives mean and standard deviation (n−1) of x; NaN mean of none, sd 0 of one.

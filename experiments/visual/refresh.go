@@ -75,7 +75,7 @@ func LinearFromSRGB(v float64) float64 {
 // SRGBFromLinear is the inverse of LinearFromSRGB.
 func SRGBFromLinear(l float64) float64 {
 	if l <= 0.0031308 {
-		return 12.92 * l
+		return float64(12.92 * l)
 	}
 	return float64(1.055*exact.Pow(l, 1/2.4)) - 0.055
 }
