@@ -404,6 +404,88 @@ func TestMissedTrials(t *testing.T) {
 	}
 }
 
+// An answer ends the row of missed trials.
+func TestAnswersEndTheRowOfMissedTrials(t *testing.T) {
+	t.Parallel()
+	p := begin(t, changed(t, "break_every: 7", "break_every: 0"), run.Assignment{Seed: 22})
+	p.untilBlock("tracks")
+	for i := range 12 {
+		step := p.run.Next()
+		if step.Kind != run.StepTrial {
+			t.Fatalf("%s before trial %d", run.StepKindNames[step.Kind], i+1)
+		}
+		response := ""
+		if i%3 == 2 {
+			response = p.choice(step.Trial, false)
+		}
+		p.apply(p.trial(response, ""))
+	}
+}
+
+// Catch trials come on top of a block's trials.
+func TestCatchTrialsDoNotCount(t *testing.T) {
+	t.Parallel()
+	catch := 0
+	collect(t, readStudy(t, motley), "fixed", 20, func(seed uint64, plans []run.TrialPlan) {
+		counted := 0
+		for i := range plans {
+			if plans[i].Catch {
+				catch++
+			} else {
+				counted++
+			}
+		}
+		if counted != 8 {
+			t.Errorf("seed %d: %d trials, want 8", seed, counted)
+		}
+	})
+	if catch < 20 {
+		t.Errorf("%d catch trials in 20 runs", catch)
+	}
+}
+
+// Each track of constant stimuli has an order of its own, and shows each level equally often.
+func TestConstantStimuli(t *testing.T) {
+	t.Parallel()
+	s := changed(t, `    method: quest_plus
+    parameter: coherence
+    scale: log10
+    min: 0.05
+    max: 1
+    level_count: 8
+    threshold_min: 0.05
+    threshold_max: 1
+    threshold_count: 8
+    guess: 0.5
+    max_trials: 5
+`, `    method: constant
+    parameter: coherence
+    min: 0.05
+    max: 1
+    levels: [0.1, 0.2, 0.4, 0.8]
+    repetitions: 5
+    interleave: 2
+`)
+	collect(t, s, "short", 4, func(seed uint64, plans []run.TrialPlan) {
+		var orders [2][]float64
+		for i := range plans {
+			orders[plans[i].Track] = append(orders[plans[i].Track], plans[i].Level)
+		}
+		if cmp.Equal(orders[0], orders[1]) {
+			t.Errorf("seed %d: both tracks have the order %v", seed, orders[0])
+		}
+		for track, order := range orders {
+			counts := map[float64]int{}
+			for _, level := range order {
+				counts[level]++
+			}
+			if !cmp.Equal(counts, map[float64]int{0.1: 5, 0.2: 5, 0.4: 5, 0.8: 5}) {
+				t.Errorf("seed %d, track %d: %v", seed, track, counts)
+			}
+		}
+	})
+}
+
 // Breaks come after so many shown trials, never at the end of a block.
 func TestBreaks(t *testing.T) {
 	t.Parallel()
@@ -452,6 +534,52 @@ func TestFrames(t *testing.T) {
 		// Fixation: 300 ms and a uniform share of 200 ms.
 		if ms := float64(plan.FixationFrames) * plan.RefreshMs; ms < 300-plan.RefreshMs/2 || ms > 500+plan.RefreshMs/2 {
 			t.Errorf("%g Hz: fixation of %g ms", c.hz, ms)
+		}
+	}
+}
+
+// A screen that changes in the middle of a trial: the trial is asked again with
+// the refresh intervals of the screen as it is now.
+func TestScreenChangesDuringTrial(t *testing.T) {
+	t.Parallel()
+	for _, event := range []string{"resized", "zoomed"} {
+		p := begin(t, readStudy(t, motley), run.Assignment{Seed: 23})
+		before := *p.untilBlock("tracks")
+		p.apply(p.trial("", event))
+		p.apply(run.Record{Kind: run.KindEvent, Event: &run.Event{Name: event}})
+		want := []run.StepKind{run.StepDisplayCheck}
+		if event == "zoomed" {
+			want = []run.StepKind{run.StepCard, run.StepDistance, run.StepDisplayCheck}
+		}
+		for _, k := range want {
+			if step := p.run.Next(); step.Kind != k {
+				t.Fatalf("%s: %s, want %s", event, run.StepKindNames[step.Kind], run.StepKindNames[k])
+			}
+			rec := p.answer(k)
+			if k == run.StepDisplayCheck {
+				rec.Check.RefreshMs = 1000.0 / 120
+			}
+			p.apply(rec)
+		}
+		after := p.run.Next().Trial
+		if after == nil || after.Number != before.Number+1 || after.Level != before.Level ||
+			after.RefreshMs != 1000.0/120 || after.StimulusFrames != 24 || after.RampFrames != 6 {
+			t.Errorf("%s: %+v, before it %+v", event, after, before)
+		}
+	}
+}
+
+// Once nothing is left to show, another zoom asks for no calibration.
+func TestScreenChangesAfterTheLastTrial(t *testing.T) {
+	t.Parallel()
+	p := begin(t, readStudy(t, motley), run.Assignment{Seed: 24})
+	for _, k := range []run.StepKind{run.StepQuestions, run.StepDebrief, run.StepDone} {
+		p.untilKind(k)
+		for _, event := range []string{"zoomed", "resized"} {
+			p.apply(run.Record{Kind: run.KindEvent, Event: &run.Event{Name: event}})
+			if step := p.run.Next(); step.Kind != k || step.Progress != 1 {
+				t.Errorf("%s: %s with progress %g, want %s", event, run.StepKindNames[step.Kind], step.Progress, run.StepKindNames[k])
+			}
 		}
 	}
 }

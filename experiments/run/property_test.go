@@ -19,9 +19,11 @@ type walker struct {
 
 	progress float64
 	number   int // of the next trial
-	shown    int // trials of the block that count as shown
-	block    string
-	catch    bool // the last shown trial of the block was a catch trial
+
+	refreshMs float64 // of the last display check, 0 where it was the plain one
+	shown     int     // trials of the block that count as shown
+	block     string
+	catch     bool // the last shown trial of the block was a catch trial
 }
 
 // Any legal sequence of records, with interruptions, recalibrations, refusals
@@ -38,9 +40,13 @@ func TestAnyLegalWay(t *testing.T) {
 			rt.Fatal(err)
 		}
 		w := &walker{person: &person{t: rt, study: s, run: r}, t: rt, assignment: a}
+		for range rapid.SampledFrom([]int{0, 0, 12, 40, 80, 120}).Draw(rt, "head start") {
+			w.well()
+			w.invariants()
+		}
 		// How often something else than the plain answer happens differs from way to way.
 		mischief := rapid.SampledFrom([]int{0, 3, 10, 40}).Draw(rt, "mischief")
-		for range rapid.IntRange(1, 150).Draw(rt, "length") {
+		for range rapid.IntRange(1, 100).Draw(rt, "length") {
 			if rapid.IntRange(0, 99).Draw(rt, "luck") < mischief {
 				w.mischief()
 			} else {
@@ -54,11 +60,23 @@ func TestAnyLegalWay(t *testing.T) {
 		w.reload()
 		ends[r.Next().Kind]++
 	})
-	if ends[run.StepTrial] == 0 || ends[run.StepWithdrawn] == 0 {
+	if ends[run.StepTrial] == 0 || ends[run.StepWithdrawn] == 0 || ends[run.StepDone] == 0 {
 		t.Errorf("the ways ended at %v only", ends)
 	}
 }
 
+// well answers the next step as the study hopes.
+func (w *walker) well() {
+	switch step := w.run.Next(); step.Kind {
+	case run.StepDone, run.StepRefused, run.StepWithdrawn:
+	case run.StepTrial:
+		w.takeTrial(step, w.choice(step.Trial, true), "")
+	default:
+		w.apply(w.answer(step.Kind))
+	}
+}
+
+// plain answers the next step as people and screens do.
 func (w *walker) plain() {
 	switch step := w.run.Next(); step.Kind {
 	case run.StepDone, run.StepRefused, run.StepWithdrawn:
@@ -69,6 +87,11 @@ func (w *walker) plain() {
 			response = w.choice(step.Trial, rapid.IntRange(0, 3).Draw(w.t, "right") > 0)
 		}
 		w.takeTrial(step, response, interrupted)
+	case run.StepDisplayCheck:
+		check := goodCheck()
+		check.RefreshMs = 1000 / rapid.SampledFrom([]float64{59.94, 60, 120, 144}).Draw(w.t, "refresh rate")
+		w.refreshMs = check.RefreshMs
+		w.apply(run.Record{Kind: run.KindDisplayCheck, Check: check})
 	default:
 		w.apply(w.answer(step.Kind))
 	}
@@ -79,6 +102,9 @@ func (w *walker) takeTrial(step run.Step, response, interrupted string) {
 	p := step.Trial
 	if p.Number != w.number {
 		w.t.Fatalf("trial number %d, want %d", p.Number, w.number)
+	}
+	if w.refreshMs > 0 && p.RefreshMs != w.refreshMs {
+		w.t.Fatalf("trial %d is planned for %g ms, the screen has %g ms", p.Number, p.RefreshMs, w.refreshMs)
 	}
 	if step.Block != w.block {
 		w.block, w.shown, w.catch = step.Block, 0, false

@@ -118,6 +118,7 @@ blocks:
     trials: 8
     balance: {direction_deg: [0, 180]}
     set: {coherence: 0.4}
+    catch: {every: 3, set: {coherence: 0.9}}
   - name: short
     task: which_way
     procedure: short
