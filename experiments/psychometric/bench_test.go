@@ -1,6 +1,8 @@
 package psychometric
 
 import (
+	"fmt"
+	"math"
 	"math/rand/v2"
 	"testing"
 )
@@ -19,31 +21,34 @@ func simulated(rng *rand.Rand, levels []float64, n int, m Model, threshold, slop
 	return d
 }
 
-func BenchmarkMaximise(b *testing.B) {
+func BenchmarkFit(b *testing.B) {
+	rng := rand.New(rand.NewPCG(3, 4))
+	m := Model{Guess: 0.5, Lapse: FixedLapse(0.02)}
+	six := Data{{2, 40, 21}, {4, 40, 23}, {8, 40, 29}, {16, 40, 36}, {32, 40, 39}, {64, 40, 39}}
+	track := make([]float64, 60) // levels of an adaptive track that seldom repeats one
+	for i := range track {
+		track[i] = math.Pow(10, 1+0.25*rng.NormFloat64())
+	}
 	for _, c := range []struct {
 		name string
-		m    Model
-	}{
-		{"WeibullFixedLapse", Model{Guess: 0.5, Lapse: FixedLapse(0.02)}},
-		{"WeibullFreeLapse", Model{Guess: 0.5, Lapse: FreeLapse()}},
-		{"GaussianFreeLapse", Model{Shape: Gaussian, Guess: 0.5, Lapse: FreeLapse()}},
-	} {
-		b.Run(c.name, func(b *testing.B) {
-			d := Data{{2, 40, 21}, {4, 40, 23}, {8, 40, 29}, {16, 40, 36}, {32, 40, 39}, {64, 40, 39}}
-			b.ReportAllocs()
-			for b.Loop() {
-				if _, err := Maximise(d, c.m); err != nil {
-					b.Fatal(err)
-				}
+		d    Data
+	}{{"SixLevels", six}, {"Track", simulated(rng, track, 1, m, 10, 3, 0.02)}} {
+		for _, rule := range []LapseRule{FixedLapse(0.02), FreeLapse()} {
+			for _, f := range []struct {
+				name string
+				fit  func(Data, Model) (*Result, error)
+			}{{"Maximise", Maximise}, {"FitThreshold", FitThreshold}, {"Fit", Fit}} {
+				b.Run(fmt.Sprintf("%s/free=%v/%s", c.name, rule.Free, f.name), func(b *testing.B) {
+					m := m
+					m.Lapse = rule
+					b.ReportAllocs()
+					for b.Loop() {
+						if _, err := f.fit(c.d, m); err != nil {
+							b.Fatal(err)
+						}
+					}
+				})
 			}
-		})
-		b.Run(c.name+"Profile", func(b *testing.B) {
-			d := Data{{2, 40, 21}, {4, 40, 23}, {8, 40, 29}, {16, 40, 36}, {32, 40, 39}, {64, 40, 39}}
-			for b.Loop() {
-				if _, err := Fit(d, c.m); err != nil {
-					b.Fatal(err)
-				}
-			}
-		})
+		}
 	}
 }

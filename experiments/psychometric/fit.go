@@ -115,17 +115,32 @@ func (c curve) at(m Model, x float64) float64 {
 // threshold, slope and lapse rate. The error names what is impossible in the data or
 // the model; data that merely say little give a Result whose Status says so.
 func Fit(d Data, m Model) (*Result, error) {
-	return fit(d, m, true)
+	return fit(d, m, profileAll)
+}
+
+// FitThreshold is Fit with a profile-likelihood interval of the threshold alone and Wald
+// intervals of the others (as in Maximise), in a third of the time.
+func FitThreshold(d Data, m Model) (*Result, error) {
+	return fit(d, m, profileThreshold)
 }
 
 // Maximise is Fit with Wald intervals (estimate ± quantile × standard error, computed
 // on the scale for the threshold and on ln β for the slope) in place of profile
-// likelihood, some ten times faster. Its Status does not look at intervals.
+// likelihood, some fifty times faster. Its Status does not look at intervals.
 func Maximise(d Data, m Model) (*Result, error) {
-	return fit(d, m, false)
+	return fit(d, m, profileNone)
 }
 
-func fit(d Data, m Model, profiles bool) (*Result, error) {
+// profiling is the set of parameters that get profile intervals.
+type profiling int
+
+const (
+	profileNone profiling = iota
+	profileThreshold
+	profileAll
+)
+
+func fit(d Data, m Model, wanted profiling) (*Result, error) {
 	if err := m.Check(); err != nil {
 		return nil, err
 	}
@@ -147,10 +162,10 @@ func fit(d Data, m Model, profiles bool) (*Result, error) {
 	s := p.summit()
 	r.describe(p, &s)
 	r.information(p, &s)
-	if profiles {
-		r.profiles(p, &s)
+	if wanted != profileNone {
+		r.profiles(p, &s, wanted)
 	}
-	r.judge(p, &s, profiles)
+	r.judge(p, &s, wanted)
 	return r, nil
 }
 
@@ -205,7 +220,7 @@ func (p *problem) scaled(t float64) float64 {
 }
 
 // profiles fills in the profile intervals.
-func (r *Result) profiles(p *problem, s *summit) {
+func (r *Result) profiles(p *problem, s *summit, wanted profiling) {
 	target := s.value - drop(r.Model.confidence())
 	if s.outcome == levelLike {
 		if i, ok := p.survey(target); ok {
@@ -218,6 +233,9 @@ func (r *Result) profiles(p *problem, s *summit) {
 		step = clamp(r.OnScale.SE/p.width, 1e-3, 1)
 	}
 	r.setThresholdInterval(p, p.interval(iThreshold, s, step, target))
+	if wanted == profileThreshold {
+		return
+	}
 	if p.free[iSlope] {
 		i := p.interval(iSlope, s, 0.3, target)
 		r.Slope.Interval = Interval{math.Exp(i.low) / p.width, math.Exp(i.high) / p.width, i.openLow, i.openHigh}

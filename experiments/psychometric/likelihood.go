@@ -81,12 +81,12 @@ func (p *problem) standardise() {
 }
 
 // Bounds of the search on the standardised scale. Beyond them nothing changes that
-// data could show: a function that takes 20 times the tested range for its rise is a
+// data could show: a function that takes 1000 times the tested range for its rise is a
 // constant there, and one that rises within a twentieth of the smallest gap between
 // levels is a step.
 const (
 	farthest      = 10.0 // |threshold| ≤ this many ranges from the middle
-	shallowest    = 20.0 // spread (F = 0.1 to 0.9) at most this many ranges
+	shallowest    = 1e3  // spread (F = 0.1 to 0.9) at most this many ranges
 	steepestShare = 0.05 // spread at least this share of the smallest gap …
 	steepest      = 1e-4 // … and at least this share of the range
 )

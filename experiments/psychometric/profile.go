@@ -27,45 +27,57 @@ func (p *problem) fixed(index int, value float64) *problem {
 }
 
 // profile is the maximum of L with one parameter held at value; warm is a point nearby.
+// A second climb starts where a scan promises a maximum other than the one climbed to.
 func (p *problem) profile(index int, value float64, warm vector) maximum {
 	q := p.fixed(index, value)
 	best := q.climb(warm)
 	start, v := q.scan(q.clip(best.theta))
-	if v > best.value {
-		best = maximum{start, v, true}
-	}
-	if far := start[iSlope] != best.theta[iSlope] || start[iThreshold] != best.theta[iThreshold]; far || v == best.value {
+	far := math.Abs(start[iSlope]-best.theta[iSlope]) > 0.8 || math.Abs(start[iThreshold]-best.theta[iThreshold]) > 0.25
+	if far && v > best.value-2 {
 		if m := q.climb(start); m.value > best.value {
 			best = m
 		}
 	}
+	if v > best.value {
+		best = maximum{start, v, true}
+	}
 	return best
 }
 
-// scan tries other slopes (or thresholds, where the slope is held) with the rest of theta.
+// scanStep in ln slope: a factor of 3.
+const scanStep = 1.1
+
+// scan tries other slopes (or thresholds, where the slope is held), each with the lapse
+// rate of theta and, if it is free, with few and with many lapses.
 func (p *problem) scan(theta vector) (vector, float64) {
 	best, value := theta, math.Inf(-1)
-	try := func(t vector) {
-		if v := p.value(p.clip(t)); v > value {
-			best, value = p.clip(t), v
+	lapses := [3]float64{theta[iLapse]}
+	count := 1
+	if p.free[iLapse] {
+		for _, share := range startLapses {
+			lapses[count] = p.low[iLapse] + share*(p.high[iLapse]-p.low[iLapse])
+			count++
 		}
 	}
-	if p.free[iSlope] {
-		t := theta
-		for _, s := range p.startSlopes() {
-			t[iSlope] = s
-			try(t)
+	index, step := iSlope, scanStep
+	from, to := p.low[iSlope], p.high[iSlope]
+	if !p.free[iSlope] {
+		index, step, from, to = iThreshold, 0.125, -0.75, 0.75
+		if !p.free[iThreshold] {
+			from, to = theta[iThreshold], theta[iThreshold]
 		}
-		t[iSlope] = p.low[iSlope]
-		try(t)
-		t[iSlope] = p.high[iSlope]
-		try(t)
-		return best, value
 	}
-	for i := range startThresholds {
-		t := theta
-		t[iThreshold] = -0.75 + 1.5*float64(i)/(startThresholds-1)
-		try(t)
+	for _, lapse := range lapses[:count] {
+		for x := from; ; x = math.Min(x+step, to) {
+			t := theta
+			t[index], t[iLapse] = x, lapse
+			if v := p.value(t); v > value {
+				best, value = t, v
+			}
+			if x >= to {
+				break
+			}
+		}
 	}
 	return best, value
 }
@@ -77,82 +89,86 @@ func (p *problem) walk(index int, from vector, direction, step, target float64) 
 	if direction < 0 {
 		bound = p.low[index]
 	}
-	inside, warm := from[index], from
+	in := point{from[index], maximum{theta: from, value: math.Inf(1)}}
 	for {
-		x, m, crossed := p.outward(index, inside, bound, step, target, warm)
+		before, after, crossed := p.outward(index, in, bound, step, target)
 		if !crossed {
 			return bound, true
 		}
 		// The likelihood may rise again further out: look before settling.
-		if again, w, ok := p.beyond(index, x, bound, math.Abs(x-inside), target, m.theta); ok {
-			inside, warm = again, w
+		if again, ok := p.beyond(index, after, bound, math.Abs(after.x-before.x), target); ok {
+			in = again
 			continue
 		}
-		return p.crossing(index, inside, x, target, warm), false
+		return p.crossing(index, before, after, target), false
 	}
 }
 
-// outward steps away from inside until L falls below target.
-func (p *problem) outward(index int, inside, bound, step, target float64, warm vector) (float64, maximum, bool) {
+// point is a value of the profiled parameter with the maximum there.
+type point struct {
+	x float64
+	maximum
+}
+
+func (p *problem) profilePoint(index int, x float64, warm vector) point {
+	return point{x, p.profile(index, x, warm)}
+}
+
+// outward steps away from a point inside until L falls below target: between the two
+// points returned it crosses.
+func (p *problem) outward(index int, in point, bound, step, target float64) (before, after point, crossed bool) {
 	sign := 1.0
-	if bound < inside {
+	if bound < in.x {
 		sign = -1
 	}
-	x := inside
-	for {
-		if x == bound {
-			return x, maximum{}, false
-		}
-		x += sign * step
+	for in.x != bound {
+		x := in.x + sign*step
 		if sign*(x-bound) > 0 {
 			x = bound
 		}
-		m := p.profile(index, x, warm)
-		if m.value < target {
-			return x, m, true
+		next := p.profilePoint(index, x, in.theta)
+		if next.value < target {
+			return in, next, true
 		}
-		warm = m.theta
+		in = next
 		step *= 1.5
 	}
+	return in, in, false
 }
 
-// beyond looks for a point past x, out to the bound, where L is back above target.
-func (p *problem) beyond(index int, x, bound, step, target float64, warm vector) (float64, vector, bool) {
-	for distance := step; ; distance *= 2.5 {
-		y := x + distance
-		if bound < x {
-			y = x - distance
+// beyond looks for a point past out, towards the bound, where L is back above target.
+func (p *problem) beyond(index int, out point, bound, step, target float64) (point, bool) {
+	sign := math.Copysign(1, bound-out.x)
+	far := math.Abs(bound - out.x)
+	for distance := step; far > 0; distance *= 4 {
+		distance = math.Min(distance, far)
+		next := p.profilePoint(index, out.x+sign*distance, out.theta)
+		if next.value >= target {
+			return next, true
 		}
-		last := math.Abs(y-x) >= math.Abs(bound-x)
-		if last {
-			y = bound
+		if distance == far {
+			break
 		}
-		m := p.profile(index, y, warm)
-		if m.value >= target {
-			return y, m.theta, true
-		}
-		if last {
-			return 0, warm, false
-		}
-		warm = m.theta
 	}
+	return point{}, false
 }
 
-// crossing finds where L passes target between inside (above) and outside (below), by
-// regula falsi with halving (the Illinois rule), which a steep or bent profile cannot defeat.
-func (p *problem) crossing(index int, inside, outside, target float64, warm vector) float64 {
-	tolerance := 1e-7 * math.Max(1, math.Abs(inside))
-	m := p.profile(index, inside, warm)
-	a, fa, theta := inside, m.value-target, m.theta
-	b, fb := outside, p.profile(index, outside, theta).value-target
+// crossing finds where L passes target between a point above it and one below, by
+// regula falsi with halving (the Illinois rule) and a bisection every third time, which a
+// steep or bent profile cannot defeat.
+func (p *problem) crossing(index int, above, below point, target float64) float64 {
+	tolerance := 1e-6 * math.Max(1, math.Abs(above.x))
+	a, b := above.x, below.x
+	fa, fb := math.Max(math.Min(above.value, target+10)-target, 0), below.value-target
+	theta := above.theta
 	for i := 0; i < 60 && math.Abs(b-a) > tolerance; i++ {
-		x := (a*fb - b*fa) / (fb - fa)
-		if i%3 == 2 || math.IsNaN(x) {
-			x = (a + b) / 2
+		x := (a + b) / 2
+		if i%3 != 2 && fb < fa {
+			x = (a*fb - b*fa) / (fb - fa)
 		}
 		m := p.profile(index, x, theta)
 		f := m.value - target
-		if math.Abs(f) < 1e-8 {
+		if math.Abs(f) < 1e-6 {
 			return x
 		}
 		if f >= 0 {
@@ -190,31 +206,30 @@ func surveyed() []float64 {
 // survey is the threshold's interval where the supremum lies at a constant; ok is false
 // if no threshold within the bounds comes near the supremum.
 func (p *problem) survey(target float64) (i span, ok bool) {
-	list := surveyed()
+	var list []point
 	first, last := -1, -1
 	warm := vector{0, math.Log(p.model.Shape.width()), (p.low[iLapse] + p.high[iLapse]) / 2}
-	thetas := make([]vector, len(list))
-	for j, t := range list {
-		m := p.profile(iThreshold, t, warm)
-		warm, thetas[j] = m.theta, m.theta
-		if m.value >= target {
+	for j, t := range surveyed() {
+		list = append(list, p.profilePoint(iThreshold, t, warm))
+		warm = list[j].theta
+		if list[j].value >= target {
 			if first < 0 {
 				first = j
 			}
 			last = j
 		}
 	}
-	if first < 0 {
-		return span{-farthest, farthest, true, true}, false
-	}
 	i = span{low: -farthest, openLow: true, high: farthest, openHigh: true}
+	if first < 0 {
+		return i, false
+	}
 	if first > 0 {
 		i.openLow = false
-		i.low = p.crossing(iThreshold, list[first], list[first-1], target, thetas[first])
+		i.low = p.crossing(iThreshold, list[first], list[first-1], target)
 	}
 	if last < len(list)-1 {
 		i.openHigh = false
-		i.high = p.crossing(iThreshold, list[last], list[last+1], target, thetas[last])
+		i.high = p.crossing(iThreshold, list[last], list[last+1], target)
 	}
 	return i, true
 }

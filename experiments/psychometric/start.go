@@ -1,6 +1,9 @@
 package psychometric
 
-import "math"
+import (
+	"math"
+	"slices"
+)
 
 // startTable holds log P and log(1 − P) on a coarse grid of parameters, for levels
 // pooled into a few groups. It depends on the levels and not on the responses, so that
@@ -22,6 +25,9 @@ const maxGroups = 12
 
 // startSpreads are the spreads tried, as shares of the tested range.
 var startSpreads = []float64{0.05, 0.12, 0.25, 0.5, 1, 2.5}
+
+// startLead is how far below the grid's best a start may lie.
+const startLead = 4.0
 
 const startThresholds = 13 // from −0.75 to 0.75 ranges about the middle
 
@@ -124,8 +130,9 @@ func (p *problem) starts(list []vector) []vector {
 		}
 		t.values[c] = v
 	}
+	best := slices.Max(t.values)
 	for c := range t.cells {
-		if t.peak(c) {
+		if t.values[c] > best-startLead && t.peak(c) {
 			list = append(list, t.cells[c])
 		}
 	}

@@ -76,7 +76,7 @@ func (r *Result) tooFew(p *problem) bool {
 const flatEvidence = 2.706
 
 // judge sets Status, Explanation and Notes.
-func (r *Result) judge(p *problem, s *summit, profiled bool) {
+func (r *Result) judge(p *problem, s *summit, wanted profiling) {
 	n, k := p.totals()
 	evidence := 2 * (s.value - s.constant)
 	switch {
@@ -95,17 +95,17 @@ func (r *Result) judge(p *problem, s *summit, profiled bool) {
 	case s.outcome == stepLike:
 		r.Status = Separable
 		r.Explanation = r.stepWords(p, s)
-	case r.outside():
+	case p.free[iSlope] && r.outside():
 		r.Status = Outside
 		r.Explanation = fmt.Sprintf("The threshold lies beyond the levels tested (%s); it is an extrapolation along the fitted function. %s", r.tested(), capital(r.limits()))
-	case profiled && !r.Threshold.Interval.Closed():
+	case wanted != profileNone && !r.Threshold.Interval.Closed():
 		r.Status = Open
 		r.Explanation = "There is an estimate of the threshold, but the data do not limit it on both sides: " + r.limits()
 	default:
 		r.Status = OK
 		r.Explanation = "The data determine the threshold: " + r.limits()
 	}
-	r.note(p, s, profiled)
+	r.note(p, s, wanted)
 }
 
 func (r *Result) direction() string {
@@ -159,7 +159,7 @@ func (r *Result) stepWords(p *problem, s *summit) string {
 }
 
 // note adds remarks that do not change the verdict.
-func (r *Result) note(p *problem, s *summit, profiled bool) {
+func (r *Result) note(p *problem, s *summit, wanted profiling) {
 	if s.outcome == interior && !s.converged {
 		r.Notes = append(r.Notes, "The search for the maximum did not settle; treat the estimates with care.")
 	}
@@ -171,10 +171,10 @@ func (r *Result) note(p *problem, s *summit, profiled bool) {
 			r.Notes = append(r.Notes, "The lapse rate is at 0; standard errors take it as known.")
 		}
 	}
-	if profiled && r.Slope.Valid && p.free[iSlope] && r.Slope.Interval.OpenHigh {
+	if wanted == profileAll && r.Slope.Valid && p.free[iSlope] && r.Slope.Interval.OpenHigh {
 		r.Notes = append(r.Notes, "The slope has no upper limit.")
 	}
-	if profiled && r.Slope.Valid && p.free[iSlope] && r.Slope.Interval.OpenLow {
+	if wanted == profileAll && r.Slope.Valid && p.free[iSlope] && r.Slope.Interval.OpenLow {
 		r.Notes = append(r.Notes, "The slope has no lower limit.")
 	}
 }
