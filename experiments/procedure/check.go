@@ -47,6 +47,9 @@ func checkConstant(s Spec, add func(key, message string)) {
 }
 
 func checkStaircase(s Spec, add func(key, message string)) {
+	if len(s.StepsUp) == 0 {
+		add("steps", "a staircase needs at least one step")
+	}
 	for _, step := range s.StepsUp {
 		if step <= 0 {
 			add("steps", "steps must be above 0")
@@ -77,8 +80,20 @@ func checkQuestPlus(s Spec, add func(key, message string)) {
 	if s.ThresholdMin >= s.ThresholdMax {
 		add("threshold_min", "threshold_min must be below threshold_max")
 	}
-	if s.Scale == Log10 && s.ThresholdMin <= 0 {
-		add("threshold_min", "thresholds on a log10 scale must be above 0")
+	if s.ThresholdMin <= 0 {
+		add("threshold_min", "thresholds must be above 0, where the Weibull function begins: give threshold_min")
+	}
+	if s.ThresholdCount < 2 {
+		add("threshold_count", "at least 2 thresholds are needed")
+	}
+	if s.LevelCount < 2 {
+		add("level_count", "at least 2 levels are needed")
+	}
+	if len(s.Slopes) == 0 {
+		add("slopes", "at least one slope is needed")
+	}
+	if len(s.Lapses) == 0 {
+		add("lapses", "at least one lapse rate is needed")
 	}
 	if s.ThresholdMax < s.Min || s.ThresholdMin > s.Max {
 		add("threshold_min", "no threshold considered lies within the levels from min to max")
