@@ -4,7 +4,7 @@
 import { browserClock, measureIntervals } from "./clock.js";
 import type { Engine } from "./engine.js";
 import { known, say } from "./messages.js";
-import { button, h, notice, show } from "./page.js";
+import { button, h, meantForControl, notice, show } from "./page.js";
 import type { StudyText } from "./protocol.js";
 
 const cardWidthMm = 85.6; // ISO/IEC 7810 ID-1
@@ -38,6 +38,9 @@ export async function cardPage(engine: Engine, study: StudyText): Promise<Conten
     }
     const key = `card_again_${verdict.reason}`;
     complaint = known(key) ? say(key) : say("card_again_card_spread");
+    if (verdict.reason === "card_spread" && verdict.css_px_per_mm !== null && verdict.sd_css_px_per_mm !== null) {
+      complaint += ` ${say("card_spread", { width: (cardWidthMm * verdict.css_px_per_mm).toFixed(0), sd: (cardWidthMm * verdict.sd_css_px_per_mm).toFixed(0) })}`;
+    }
   }
 }
 
@@ -69,7 +72,7 @@ function oneCard(n: number, of: number, complaint: string): Promise<number> {
       const step = e.shiftKey ? 10 : 1;
       if (e.code === "ArrowRight" || e.code === "ArrowUp") set(width + step);
       else if (e.code === "ArrowLeft" || e.code === "ArrowDown") set(width - step);
-      else if (e.code === "Enter" && !e.repeat) return finish();
+      else if (e.code === "Enter" && !e.repeat && !meantForControl(e)) return finish();
       else return;
       e.preventDefault();
     };
@@ -92,7 +95,7 @@ function oneCard(n: number, of: number, complaint: string): Promise<number> {
     show(
       "card", say("card_title"), complaintLine, h("p", {}, say("card_text")),
       h("p", { class: "small" }, say("card_nth", { n, of }), " ", say("card_keys")), card,
-      h("div", { class: "actions" }, button(say("continue"), "continue", (e) => { if (e.detail > 0) finish(); })),
+      h("div", { class: "actions" }, button(say("continue"), "continue", finish)),
       h("p", { class: "small" }, say("card_privacy")),
     );
     handle.focus({ preventScroll: true });
@@ -105,6 +108,12 @@ export async function distancePage(engine: Engine, study: StudyText, cssPxPerMm:
   let complaint = "";
   for (;;) {
     await blindIntroduction(complaint);
+    // Seen from far away, the blind spot does not fit in a narrow window.
+    if (dotReach(cssPxPerMm) < leastReachMm * cssPxPerMm) await enterFullscreen(study);
+    if (dotReach(cssPxPerMm) < leastReachMm * cssPxPerMm) {
+      complaint = say("blind_narrow");
+      continue;
+    }
     const offsets: number[] = [];
     await blindTrial(0, study.screen.distance_repeats, cssPxPerMm, "");
     let warning = "";
@@ -134,7 +143,7 @@ function blindIntroduction(complaint: string): Promise<void> {
     const line = notice();
     line.textContent = complaint;
     const key = (e: KeyboardEvent): void => {
-      if (e.code !== "Space" || e.repeat) return;
+      if (e.code !== "Space" || e.repeat || meantForControl(e)) return;
       e.preventDefault();
       finish();
     };
@@ -148,6 +157,13 @@ function blindIntroduction(complaint: string): Promise<void> {
   });
 }
 
+const leastReachMm = 200; // the far edge of the blind spot at 60 cm: 18.5 deg
+
+/** How far the dot can move away from the mark, in css px. */
+function dotReach(cssPxPerMm: number): number {
+  return Math.min(innerWidth - 120, 320 * cssPxPerMm);
+}
+
 // Letters that are hard to confuse.
 const letters = "AEHKMRTX";
 
@@ -157,7 +173,7 @@ const letters = "AEHKMRTX";
  * is practice, without the letter.
  */
 async function blindTrial(n: number, of: number, cssPxPerMm: number, warning: string): Promise<number | null> {
-  const reach = Math.min(innerWidth - 120, 320 * cssPxPerMm);
+  const reach = dotReach(cssPxPerMm);
   const line = notice();
   line.textContent = warning;
   const mark = h("div", { class: "mark", test: "blind-mark", "aria-hidden": "true" });
@@ -180,7 +196,7 @@ async function blindTrial(n: number, of: number, cssPxPerMm: number, warning: st
       handle = requestAnimationFrame(frame);
     };
     const key = (e: KeyboardEvent): void => {
-      if (e.code !== "Space" || e.repeat) return;
+      if (e.code !== "Space" || e.repeat || meantForControl(e)) return;
       e.preventDefault();
       removeEventListener("keydown", key);
       cancelAnimationFrame(handle);
@@ -221,6 +237,8 @@ export async function enterFullscreen(study: StudyText): Promise<void> {
   if (!study.screen.fullscreen || document.fullscreenElement || !document.fullscreenEnabled) return;
   try {
     await document.documentElement.requestFullscreen({ navigationUI: "hide" });
+    // Where the browser can, Escape comes to the page first: a display stops within a frame.
+    await (navigator as { keyboard?: { lock?: (keys: string[]) => Promise<void> } }).keyboard?.lock?.(["Escape"]);
     await new Promise((r) => setTimeout(r, 300)); // until the window has settled
   } catch {
     // Refused: the display check sees whether the window is large enough.

@@ -13,6 +13,7 @@ import { known, say, setLanguage } from "./messages.js";
 import { Outbox, Refused, openShelf, type Answer, type Session, type Shelf, type Stored } from "./outbox.js";
 import { button, confirm, h, notice, pause, paragraphs, setFooter, show, tell } from "./page.js";
 import { asCreatedRun, asRunState, asStart, asStudy, type RecordBody, type RunState, type Start, type StudyText } from "./protocol.js";
+import { keyReminder } from "./keys.js";
 import { inLanguage, questionsPage, screeningPage } from "./questions.js";
 import { Renderer } from "./render.js";
 import { runTrial, TrialInput, type Stage } from "./trial.js";
@@ -144,7 +145,7 @@ class Participation {
     const content = await this.consentPage();
     if (!content) return false;
     show("storing", say("storing"));
-    const key = crypto.randomUUID();
+    const key = creationKey(this.key);
     const consent = this.body("consent", content);
     for (let delay = 500; ; delay = Math.min(8000, delay * 2)) {
       try {
@@ -153,6 +154,7 @@ class Participation {
         }));
         const session: Session = { study: this.key, run: created.run, token: created.token, seed: created.seed, group: created.group, order: created.order, bundle: created.bundle, language: this.language };
         await this.shelf.saveSession(session);
+        forgetCreationKey(this.key);
         await this.begin(session);
         this.take(consent);
         return true;
@@ -214,6 +216,7 @@ class Participation {
         this.ended = true;
         return this.finish(step);
       }
+      if (await this.zoomedBefore(step)) continue;
       await this.answer(step);
     }
   }
@@ -232,12 +235,14 @@ class Participation {
         return this.record("refusal", { step: "display_check", reason: outcome.refused!.reason, detail: outcome.refused!.detail });
       }
       case "instructions":
-        await pause("instructions", say("instructions_title"), [h("div", { class: "text" }, renderMarkdown(this.study.texts[this.language]!.instructions))], say("begin"), ["Enter", "Space"]);
+        await pause("instructions", say("instructions_title"), [
+          h("div", { class: "text" }, renderMarkdown(this.study.texts[this.language]!.instructions)), await keyReminder(this.study, this.language),
+        ], say("begin"), ["Enter", "Space"]);
         return this.record("instructions", {});
       case "break":
         return this.takeBreak(step);
       case "trial":
-        return this.trial(step.trial!, step.progress);
+        return this.trial(step.trial!);
       case "questions":
         return this.record("answers", { answers: await questionsPage(this.study, this.language) });
       case "debrief":
@@ -298,12 +303,10 @@ class Participation {
     return renderer;
   }
 
-  private async trial(plan: TrialPlan, progress: number): Promise<void> {
+  private async trial(plan: TrialPlan): Promise<void> {
     const renderer = this.showCanvas(plan);
     const task = this.study.tasks[plan.task]!;
     this.canvas.dataset["trial"] = String(plan.number);
-    this.canvas.dataset["progress"] = progress.toFixed(3);
-    this.canvas.dataset["right"] = task.choices_order[plan.correct_choice] ?? "";
     this.canvas.dataset["phase"] = "running";
     const stage: Stage = {
       clock: browserClock,
@@ -347,8 +350,9 @@ class Participation {
   }
 
   private async interrupted(m: Measurement): Promise<void> {
-    await this.noteWindow();
+    await this.pendingEvents;
     const escape = m.interrupted === "escape";
+    if (escape && document.fullscreenElement) await document.exitFullscreen();
     await pause("interrupted", say("paused_trial_title"), [h("p", {}, say(escape ? "paused_trial_escape" : "paused_trial"))], say("fullscreen"));
     await enterFullscreen(this.study);
   }
@@ -374,6 +378,10 @@ class Participation {
       this.input.interrupt(devicePixelRatio === this.calibration.pixelRatio ? "resized" : "zoomed");
     });
     addEventListener("pagehide", () => this.outbox.kick());
+    // Escape leaves full screen on every page; during a trial it stops the display first.
+    addEventListener("keydown", (e) => {
+      if (e.code === "Escape" && !this.inTrial && document.fullscreenElement && !document.querySelector("dialog[open]")) void document.exitFullscreen();
+    });
   }
 
   private pendingEvents: Promise<void> = Promise.resolve();
@@ -383,10 +391,12 @@ class Participation {
     this.pendingEvents = this.pendingEvents.then(() => this.record("event", { name, detail })).catch(() => {});
   }
 
-  /** After an interruption: another zoom or screen needs the calibration again. */
-  private async noteWindow(): Promise<void> {
+  /** Another zoom or screen since the card was set needs the calibration again: the engine asks for it. */
+  private async zoomedBefore(step: Step): Promise<boolean> {
+    if (!["distance", "display_check", "instructions", "break", "trial"].includes(step.step) || devicePixelRatio === this.calibration.pixelRatio) return false;
     await this.pendingEvents;
-    if (devicePixelRatio !== this.calibration.pixelRatio) await this.record("event", { name: "zoomed", detail: String(devicePixelRatio) });
+    await this.record("event", { name: "zoomed", detail: String(devicePixelRatio) });
+    return true;
   }
 
   // The way out and the end.
@@ -404,16 +414,19 @@ class Participation {
     try {
       await call("POST", "/api/run/withdraw", { token: this.session.token, body: {} });
     } catch (e) {
-      if (!(e instanceof Refused)) {
-        alert(say("withdraw_offline"));
-        return;
-      }
+      return this.withdrawFailed(e instanceof Refused ? say("withdraw_refused", { what: e.message }) : say("withdraw_offline"));
     }
     this.withdrawn = true;
     await this.shelf.dropSession(this.key, this.session.run);
     if (document.fullscreenElement) await document.exitFullscreen();
     setFooter(null);
     tell("withdrawn", say("withdrawn_title"), say("withdrawn"));
+  }
+
+  /** Nothing was deleted: say so, and say it where it is seen. */
+  private withdrawFailed(text: string): void {
+    document.querySelector(".withdraw-failed")?.remove();
+    document.querySelector("footer")?.before(h("p", { class: "notice withdraw-failed", role: "alert", test: "withdraw-failed" }, text));
   }
 
   private async finish(step: Step): Promise<void> {
@@ -474,7 +487,7 @@ async function main(): Promise<void> {
     const { study, studyText, code } = await load(start);
     const shelf = await openShelf();
     const alone = await takeTurn(start.link);
-    if (!alone) return tell("other-tab", say("failed_title"), say("other_tab"));
+    if (!alone) return tell("other-tab", say("other_tab_title"), say("other_tab"));
     await new Participation(start, study, studyText, code, shelf).run();
   } catch (e) {
     if (document.fullscreenElement) await document.exitFullscreen();
@@ -482,6 +495,28 @@ async function main(): Promise<void> {
     console.error(e);
     if (e instanceof NotVerified) tell("not-verified", say("not_verified_title"), say("not_verified", { what: e.message }));
     else tell("failed", say("failed_title"), say("failed", { what: e instanceof Error ? e.message : String(e) }));
+  }
+}
+
+// The key that makes the beginning of a run idempotent outlives the page: if the
+// server's answer is lost, agreeing again gives the same run and not a second one.
+
+function creationKey(study: string): string {
+  const name = `distal-begin-${study}`;
+  try {
+    const kept = localStorage.getItem(name) ?? crypto.randomUUID();
+    localStorage.setItem(name, kept);
+    return kept;
+  } catch {
+    return crypto.randomUUID();
+  }
+}
+
+function forgetCreationKey(study: string): void {
+  try {
+    localStorage.removeItem(`distal-begin-${study}`);
+  } catch {
+    // Nothing was kept.
   }
 }
 

@@ -1,10 +1,11 @@
 // Shows the signed Markdown texts: headings, paragraphs, lists, bold, italics
 // and links. Elements are made one by one, so nothing in a text can become code.
 
+const marks = /\*\*((?:[^*]|\*[^*]+\*)+)\*\*|\*([^*\s][^*]*)\*|\[([^\]]+)\]\((https:\/\/[^)\s]+)\)/g;
+
 function inline(text: string, into: HTMLElement): void {
-  const pattern = /\*\*([^*]+)\*\*|\*([^*]+)\*|\[([^\]]+)\]\((https:\/\/[^)\s]+)\)/g;
   let at = 0;
-  for (const m of text.matchAll(pattern)) {
+  for (const m of text.matchAll(marks)) {
     into.append(text.slice(at, m.index));
     if (m[1] !== undefined) into.append(element("strong", m[1]));
     else if (m[2] !== undefined) into.append(element("em", m[2]));
@@ -26,41 +27,58 @@ function element(tag: string, text: string): HTMLElement {
   return e;
 }
 
-/** Renders Markdown; list items can be left out (consent statements become boxes elsewhere). */
-export function renderMarkdown(text: string, options: { lists: boolean } = { lists: true }): DocumentFragment {
-  const out = document.createDocumentFragment();
-  let list: HTMLElement | null = null;
-  let listTag = "";
-  let paragraph: string[] = [];
-  const close = (): void => {
-    if (paragraph.length > 0) out.append(element("p", paragraph.join(" ")));
-    paragraph = [];
+interface Piece {
+  tag: "h2" | "h3" | "h4" | "p" | "ul" | "ol";
+  /** One text, or those of the list's items. */
+  texts: string[];
+}
+
+const itemLine = /^(?:([-*])|\d+\.) +(.+)$/;
+
+/** Splits a text into its pieces. A line that begins with two spaces goes on with the list item before it. */
+function pieces(text: string): Piece[] {
+  const all: Piece[] = [];
+  let open: Piece | null = null;
+  const begin = (tag: Piece["tag"], first: string): Piece => {
+    const piece: Piece = { tag, texts: [first] };
+    all.push(piece);
+    return piece;
   };
   for (const line of text.split("\n")) {
     const heading = /^(#{1,3}) +(.*)$/.exec(line);
-    const bullet = /^[-*] +(.*)$/.exec(line);
-    const numbered = /^\d+\. +(.*)$/.exec(line);
-    if (!bullet && !numbered) list = null;
+    const item = itemLine.exec(line);
     if (heading) {
-      close();
-      out.append(element(`h${heading[1]!.length}`, heading[2]!));
-    } else if (bullet || numbered) {
-      close();
-      if (bullet && !options.lists) continue;
-      const tag = bullet ? "ul" : "ol";
-      const open: HTMLElement = listTag === tag && list ? list : document.createElement(tag);
-      if (open !== list) out.append(open);
-      list = open;
-      listTag = tag;
-      open.append(element("li", (bullet ?? numbered)![1]!));
-    } else if (line.trim() === "") close();
-    else paragraph.push(line.trim());
+      // The page's own title is the h1.
+      begin(`h${heading[1]!.length + 1}` as "h2", heading[2]!);
+      open = null;
+    } else if (item) {
+      const tag = item[1] ? "ul" : "ol";
+      if (open?.tag === tag) open.texts.push(item[2]!);
+      else open = begin(tag, item[2]!);
+    } else if (line.trim() === "") open = null;
+    else if (open && (open.tag === "p" || line.startsWith("  "))) open.texts.push(`${open.texts.pop()} ${line.trim()}`);
+    else open = begin("p", line.trim());
   }
-  close();
+  return all;
+}
+
+/** Renders Markdown; bullet lists can be left out (consent statements become boxes elsewhere). */
+export function renderMarkdown(text: string, options: { lists: boolean } = { lists: true }): DocumentFragment {
+  const out = document.createDocumentFragment();
+  for (const piece of pieces(text)) {
+    if (piece.tag === "ul" && !options.lists) continue;
+    if (piece.tag !== "ul" && piece.tag !== "ol") {
+      out.append(element(piece.tag, piece.texts[0]!));
+      continue;
+    }
+    const list = document.createElement(piece.tag);
+    for (const t of piece.texts) list.append(element("li", t));
+    out.append(list);
+  }
   return out;
 }
 
-/** The list items of a consent text, as in the engine's study.Statements. */
+/** What participants tick: the items of a consent text's bullet lists, as many as study.Statements finds. */
 export function statements(text: string): string[] {
-  return text.split("\n").filter((l) => /^[-*] ./.test(l)).map((l) => l.slice(2));
+  return pieces(text).flatMap((p) => (p.tag === "ul" ? p.texts : []));
 }

@@ -184,8 +184,13 @@ export class Outbox {
         }
         this.onState("offline");
         await new Promise((wake) => {
-          const timer = setTimeout(wake, this.delayMs);
-          addEventListener("online", () => (clearTimeout(timer), wake(null)), { once: true });
+          const go = (): void => {
+            clearTimeout(timer);
+            removeEventListener("online", go);
+            wake(null);
+          };
+          const timer = setTimeout(go, this.delayMs);
+          addEventListener("online", go);
         });
         this.delayMs = Math.min(15_000, this.delayMs * 2);
       }

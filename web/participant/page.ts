@@ -45,6 +45,11 @@ export function notice(): HTMLElement {
   return h("p", { class: "notice", role: "alert" });
 }
 
+/** Whether a key is a control's own business: Space on a focused button presses that button. */
+export function meantForControl(e: KeyboardEvent): boolean {
+  return e.target instanceof HTMLElement && e.target.closest("button, a, input, textarea, dialog") !== null;
+}
+
 /** Shows a page with one way on, and waits for it. */
 export function pause(name: string, title: string, paragraphs: Child[], action: string, keys: string[] = ["Enter"]): Promise<MouseEvent | KeyboardEvent> {
   return new Promise((resolve) => {
@@ -53,7 +58,7 @@ export function pause(name: string, title: string, paragraphs: Child[], action: 
       resolve(e);
     };
     const key = (e: KeyboardEvent): void => {
-      if (e.repeat || !keys.includes(e.code) || document.querySelector("dialog[open]") || (e.target instanceof HTMLElement && e.target.tagName === "BUTTON")) return;
+      if (e.repeat || !keys.includes(e.code) || meantForControl(e)) return;
       e.preventDefault();
       finish(e);
     };
@@ -78,6 +83,8 @@ export function confirm(question: string, yes: string, no: string): Promise<bool
     };
     dialog.append(h("p", {}, question), h("div", { class: "actions" }, button(no, "confirm-no", end(false), "quiet"), button(yes, "confirm-yes", end(true))));
     dialog.addEventListener("cancel", end(false));
+    // Keys belong to the dialog as long as it is open, not to the page behind it.
+    dialog.addEventListener("keydown", (e) => e.stopPropagation());
     root().append(dialog);
     dialog.showModal();
   });
