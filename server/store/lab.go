@@ -209,7 +209,7 @@ func (s *Store) Ledger(ctx context.Context, lab uuid.UUID, limit int) (list []En
 // entry that does not fit, 0 if all do.
 func (s *Store) VerifyLedger(ctx context.Context, lab uuid.UUID) (bad int64, err error) {
 	err = s.InLab(ctx, lab, func(tx pgx.Tx) error {
-		rows, err := tx.Query(ctx, `SELECT number, COALESCE(person_id::text, ''), action, subject, detail, previous, digest FROM ledger ORDER BY number`)
+		rows, err := tx.Query(ctx, `SELECT number, at, COALESCE(person_id::text, ''), action, subject, detail, previous, digest FROM ledger ORDER BY number`)
 		if err != nil {
 			return err
 		}
@@ -217,11 +217,12 @@ func (s *Store) VerifyLedger(ctx context.Context, lab uuid.UUID) (bad int64, err
 		last, expected := "", int64(1)
 		for rows.Next() {
 			var number int64
+			var at time.Time
 			var person, action, subject, detail, previous, digest string
-			if err := rows.Scan(&number, &person, &action, &subject, &detail, &previous, &digest); err != nil {
+			if err := rows.Scan(&number, &at, &person, &action, &subject, &detail, &previous, &digest); err != nil {
 				return err
 			}
-			if bad == 0 && (number != expected || previous != last || digest != entryDigest(number, person, action, subject, detail, previous)) {
+			if bad == 0 && (number != expected || previous != last || digest != entryDigest(number, at, person, action, subject, detail, previous)) {
 				bad = number
 			}
 			last, expected = digest, number+1
@@ -231,8 +232,9 @@ func (s *Store) VerifyLedger(ctx context.Context, lab uuid.UUID) (bad int64, err
 	return bad, err
 }
 
-func entryDigest(number int64, person, action, subject, detail, previous string) string {
-	sum := sha256.Sum256(fmt.Appendf(nil, "%d\n%s\n%s\n%s\n%s\n%s", number, person, action, subject, detail, previous))
+// entryDigest is over everything that an entry says, its time to the microsecond.
+func entryDigest(number int64, at time.Time, person, action, subject, detail, previous string) string {
+	sum := sha256.Sum256(fmt.Appendf(nil, "%d\n%d\n%s\n%s\n%s\n%s\n%s", number, at.UnixMicro(), person, action, subject, detail, previous))
 	return hex.EncodeToString(sum[:])
 }
 
@@ -258,8 +260,9 @@ func enter(ctx context.Context, tx pgx.Tx, lab, actor uuid.UUID, action, subject
 	if actor != uuid.Nil {
 		person, personText = &actor, actor.String()
 	}
-	_, err = tx.Exec(ctx, `INSERT INTO ledger (lab_id, number, person_id, action, subject, detail, previous, digest) VALUES ($1, $2, $3, $4, $5, $6, $7, $8)`,
-		lab, number, person, action, subject, string(text), previous,
-		entryDigest(number, personText, action, subject, string(text), previous))
+	at := time.Now().UTC().Truncate(time.Microsecond) // as exact as the database keeps it
+	_, err = tx.Exec(ctx, `INSERT INTO ledger (lab_id, number, at, person_id, action, subject, detail, previous, digest) VALUES ($1, $2, $3, $4, $5, $6, $7, $8, $9)`,
+		lab, number, at, person, action, subject, string(text), previous,
+		entryDigest(number, at, personText, action, subject, string(text), previous))
 	return err
 }

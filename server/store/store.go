@@ -9,6 +9,7 @@ import (
 	"fmt"
 	"io"
 	"net"
+	"slices"
 	"strings"
 	"time"
 
@@ -147,11 +148,9 @@ func interpret(err error) error {
 func unavailable(err error) bool {
 	var pg *pgconn.PgError
 	if errors.As(err, &pg) {
-		switch pg.Code[:2] {
-		case "08", "40", "53", "57": // connection, rolled back, resources, operator intervention
-			return true
-		}
-		return false
+		class := pg.Code[:min(2, len(pg.Code))]
+		// Connection, rolled back, resources, operator intervention.
+		return slices.Contains([]string{"08", "40", "53", "57"}, class)
 	}
 	var connecting *pgconn.ConnectError
 	var network net.Error
