@@ -52,7 +52,9 @@ func DefaultScreen() Screen {
 	return Screen{RefreshMs: 1000.0 / 60, JitterMs: 0.15, DropRate: 0.002, PxPerMm: 3.6, PixelRatio: 1, DistanceMm: 570, WidthPx: 1920, HeightPx: 1080}
 }
 
-// Observe takes o through s and returns the records in order. bundle is the
+// Observe takes o through s and returns the records in order. A person or
+// screen that does not suit the study ends in a refusal record, as in the
+// browser; there a bad calibration would be repeated first. bundle is the
 // digest that every record names; startMs is the participant's clock at consent.
 func Observe(s *study.Study, a run.Assignment, o Observer, screen Screen, bundle string, startMs float64) ([]run.Record, error) {
 	r, err := run.New(s, a)
@@ -69,6 +71,7 @@ func Observe(s *study.Study, a run.Assignment, o Observer, screen Screen, bundle
 			return w.records, nil
 		}
 		rec := w.respond(step)
+		w.last = step.Kind
 		rec.Sequence = r.Sequence() + 1
 		rec.AtMs = math.Floor(w.clock)
 		rec.Bundle = bundle
@@ -93,6 +96,7 @@ type walk struct {
 	records  []run.Record
 	trials   int
 	refused  bool
+	last     run.StepKind // the step before
 
 	answer, frame random.Stream
 }
@@ -113,13 +117,16 @@ func (w *walk) respond(step run.Step) *run.Record {
 		return &run.Record{Kind: run.KindScreening, Screening: w.screening()}
 	case run.StepCard:
 		w.wait(25)
-		return &run.Record{Kind: run.KindCard, Card: w.card()}
+		card := w.card()
+		return w.unless(run.CheckCard(w.study, card), step, &run.Record{Kind: run.KindCard, Card: card})
 	case run.StepDistance:
 		w.wait(40)
-		return &run.Record{Kind: run.KindDistance, Distance: w.distance()}
+		distance := w.distance()
+		return w.unless(run.CheckDistance(w.study, distance), step, &run.Record{Kind: run.KindDistance, Distance: distance})
 	case run.StepDisplayCheck:
 		w.wait(5)
-		return &run.Record{Kind: run.KindDisplayCheck, Check: w.check()}
+		check := w.check()
+		return w.unless(run.CheckDisplay(w.study, check), step, &run.Record{Kind: run.KindDisplayCheck, Check: check})
 	case run.StepInstructions:
 		w.wait(20)
 		return &run.Record{Kind: run.KindInstructions}
@@ -135,8 +142,20 @@ func (w *walk) respond(step run.Step) *run.Record {
 		w.wait(10)
 		return &run.Record{Kind: run.KindDebrief}
 	}
+	return w.refuse(w.last, step.Code)
+}
+
+// unless gives the record, or a refusal where there is a reason for one.
+func (w *walk) unless(reason string, step run.Step, rec *run.Record) *run.Record {
+	if reason == "" {
+		return rec
+	}
+	return w.refuse(step.Kind, reason)
+}
+
+func (w *walk) refuse(at run.StepKind, reason string) *run.Record {
 	w.refused = true
-	return &run.Record{Kind: run.KindRefusal, Refusal: &run.Refusal{Step: "blocks", Reason: step.Code}}
+	return &run.Record{Kind: run.KindRefusal, Refusal: &run.Refusal{Step: run.StepKindNames[at], Reason: reason}}
 }
 
 func (w *walk) screening() *run.Screening {
@@ -252,21 +271,17 @@ func (w *walk) decide(p *run.TrialPlan, choices int) (choice int, rtMs float64) 
 		}
 		f = -exact.Expm1(-exact.Pow(ratio, o.Slope))
 	}
+	// The function is that of one who sees the answer in a share of the trials
+	// and guesses in the others: P = seen + (1 − seen) g.
 	guess := 1 / float64(choices)
-	if right >= 0 && w.answer.Float64() < guess+float64((1-guess-o.Lapse)*f) {
+	seen := f * max(0, 1-o.Lapse/(1-guess))
+	if right >= 0 && w.answer.Float64() < seen {
 		return right, rtMs
 	}
-	// Wrong: any other choice, by the side bias the first if it is one.
-	if o.SideBias > 0 && right != 0 && w.answer.Float64() < o.SideBias {
-		return 0, rtMs
-	}
-	other := w.answer.Intn(max(choices-1, 1))
-	if right >= 0 && other >= right {
-		other++
-	}
-	return min(other, choices-1), rtMs
+	return w.guess(choices), rtMs
 }
 
+// guess gives the first choice in a share of SideBias, otherwise any.
 func (w *walk) guess(choices int) int {
 	if w.answer.Float64() < w.observer.SideBias {
 		return 0

@@ -13,7 +13,7 @@ import (
 type Report struct {
 	Records  int
 	Trials   int
-	Agree    int // trials whose level, values and frames are the same, bit for bit
+	Agree    int // trials whose level, values, truths and frames are the same, bit for bit
 	Problems []string
 	Outcome  run.StepKind // what comes after the last record
 }
@@ -32,10 +32,11 @@ func Verify(s *study.Study, a run.Assignment, records []run.Record) Report {
 	for i := range records {
 		rec := &records[i]
 		report.Records++
-		digest := ""
+		digest, truths := "", false
 		if rec.Kind == run.KindTrial {
 			report.Trials++
 			digest = state.Redraw(rec.Trial)
+			truths = state.SameTruths(rec.Trial)
 		}
 		if err := state.Apply(rec); err != nil {
 			report.Problems = append(report.Problems, "record "+strconv.Itoa(rec.Sequence)+": "+err.Error())
@@ -46,6 +47,10 @@ func Verify(s *study.Study, a run.Assignment, records []run.Record) Report {
 		}
 		if digest != rec.Trial.Digest {
 			report.Problems = append(report.Problems, "trial "+strconv.Itoa(rec.Trial.Trial)+": the frames' digest is "+digest+", recorded "+rec.Trial.Digest)
+			continue
+		}
+		if !truths {
+			report.Problems = append(report.Problems, "trial "+strconv.Itoa(rec.Trial.Trial)+": what the display reports of itself differs")
 			continue
 		}
 		report.Agree++

@@ -85,6 +85,8 @@ func TestChangesAreFound(t *testing.T) {
 		"Digest":   func(r *run.TrialRecord) { r.Digest = "0123456789abcdef" },
 		"Number":   func(r *run.TrialRecord) { r.Trial++ },
 		"Values":   func(r *run.TrialRecord) { r.Values[0]++ },
+		"Truths":   func(r *run.TrialRecord) { r.Truths = append([]float64{r.Truths[0] + 1}, r.Truths[1:]...) },
+		"Refresh":  func(r *run.TrialRecord) { r.RefreshMs *= 1.001 },
 	}
 	for name, change := range changes {
 		t.Run(name, func(t *testing.T) {

@@ -224,6 +224,20 @@ func jitter(steps []int, intervalsMs []float64) float64 {
 	return math.Sqrt(square / (n - 1))
 }
 
+// SameTruths tells whether t reports what the display of the trial shown last reports, bit for bit.
+func (r *Run) SameTruths(t *TrialRecord) bool {
+	if len(t.TruthKeys) != len(r.show.keys) {
+		return false
+	}
+	for i, key := range r.show.keys {
+		j := indexOf(t.TruthKeys, key)
+		if j < 0 || !sameNumber(t.Truths[j], r.show.truths[i]) {
+			return false
+		}
+	}
+	return true
+}
+
 // Redraw re-creates a recorded trial's frames and gives the digest that it must have.
 func (r *Run) Redraw(t *TrialRecord) string {
 	if !r.BeginTrial() {
