@@ -61,10 +61,11 @@ func Start(ctx context.Context, dir string) (*Cluster, error) {
 	if err != nil {
 		return nil, err
 	}
-	for _, folder := range []string{dir, c.socket} {
-		if err := ownFolder(folder, credential); err != nil {
-			return nil, err
-		}
+	if err := ownFolder(dir, credential); err != nil {
+		return nil, err
+	}
+	if err := privateFolder(c.socket, credential); err != nil {
+		return nil, err
 	}
 	if err := c.initialise(ctx, credential); err != nil {
 		return nil, err
@@ -124,7 +125,7 @@ func unprivileged() (*syscall.Credential, error) {
 		gid, _ := strconv.Atoi(u.Gid)
 		return &syscall.Credential{Uid: uint32(uid), Gid: uint32(gid)}, nil
 	}
-	return nil, errors.New("Postgres refuses to run as root and there is neither a user postgres nor nobody: start distal as another user")
+	return nil, errors.New("there is neither a user postgres nor nobody, and as root Postgres refuses to run: start distal as another user")
 }
 
 func ownFolder(folder string, credential *syscall.Credential) error {
@@ -145,8 +146,38 @@ func ownFolder(folder string, credential *syscall.Credential) error {
 		}
 		if info.Mode().Perm()&0o001 == 0 {
 			if err := os.Chmod(above, info.Mode().Perm()|0o011); err != nil {
-				return fmt.Errorf("Postgres's user cannot reach %s: %w", folder, err)
+				return fmt.Errorf("let the user of Postgres reach %s: %w", folder, err)
 			}
+		}
+	}
+	return nil
+}
+
+// privateFolder makes the socket's folder, which nobody else may enter. Its name
+// can be guessed and it stands where everybody may write: what is there already
+// must be ours.
+func privateFolder(path string, credential *syscall.Credential) error {
+	if err := os.Mkdir(path, 0o700); err != nil && !errors.Is(err, os.ErrExist) {
+		return fmt.Errorf("make folder %s for Postgres's socket: %w", path, err)
+	}
+	owner := os.Getuid()
+	if credential != nil {
+		owner = int(credential.Uid)
+	}
+	info, err := os.Lstat(path)
+	if err != nil {
+		return err
+	}
+	stat, ok := info.Sys().(*syscall.Stat_t)
+	if !ok || !info.IsDir() || int(stat.Uid) != os.Getuid() && int(stat.Uid) != owner {
+		return fmt.Errorf("%s is needed for Postgres's socket and belongs to somebody else: have it removed, or name another folder for temporary files in TMPDIR", path)
+	}
+	if err := os.Chmod(path, 0o700); err != nil {
+		return fmt.Errorf("close folder %s to others: %w", path, err)
+	}
+	if credential != nil {
+		if err := os.Lchown(path, owner, int(credential.Gid)); err != nil {
+			return fmt.Errorf("hand folder %s to Postgres's user: %w", path, err)
 		}
 	}
 	return nil
@@ -214,16 +245,26 @@ func (c *Cluster) launch(credential *syscall.Credential) error {
 // clearStale removes the pid file of a cluster that is no longer there and
 // refuses to start beside one that is.
 func (c *Cluster) clearStale() error {
-	path := filepath.Join(c.data(), "postmaster.pid")
-	text, err := os.ReadFile(path)
+	if pid := runningIn(c.data()); pid > 0 {
+		return fmt.Errorf("the private Postgres of %s is already running (process %d): is another distal using this data folder?", c.dir, pid)
+	}
+	if err := os.Remove(filepath.Join(c.data(), "postmaster.pid")); err != nil && !errors.Is(err, os.ErrNotExist) {
+		return err
+	}
+	return nil
+}
+
+// runningIn is the process that serves the cluster in folder data, 0 if none does.
+func runningIn(data string) int {
+	text, err := os.ReadFile(filepath.Join(data, "postmaster.pid"))
 	if err != nil {
-		return nil
+		return 0
 	}
 	pid, _ := strconv.Atoi(strings.TrimSpace(strings.SplitN(string(text), "\n", 2)[0]))
 	if pid > 0 && isPostgres(pid) {
-		return fmt.Errorf("the private Postgres of %s is already running (process %d): is another distal using this data folder?", c.dir, pid)
+		return pid
 	}
-	return os.Remove(path)
+	return 0
 }
 
 func isPostgres(pid int) bool {
@@ -291,9 +332,18 @@ func (c *Cluster) OwnerURL() string { return c.url(ownerRole, database) }
 // ServerURL connects as the server does.
 func (c *Cluster) ServerURL() string { return c.url(serverRole, database) }
 
-// Kill ends the cluster at once, as a crash would. Tests use it.
+// Kill ends all of the cluster's processes at once, as a crash would. Tests use it.
 func (c *Cluster) Kill() {
-	syscall.Kill(-c.command.Process.Pid, syscall.SIGKILL)
+	pid := c.command.Process.Pid
+	// Stopped, it makes no new processes; those that it has lead groups of their own.
+	syscall.Kill(pid, syscall.SIGSTOP)
+	children, _ := os.ReadFile(fmt.Sprintf("/proc/%d/task/%d/children", pid, pid))
+	for _, child := range strings.Fields(string(children)) {
+		if n, err := strconv.Atoi(child); err == nil {
+			syscall.Kill(n, syscall.SIGKILL)
+		}
+	}
+	syscall.Kill(pid, syscall.SIGKILL)
 	c.done <- <-c.done
 }
 
@@ -306,6 +356,7 @@ func (c *Cluster) Stop() error {
 	select {
 	case err := <-c.done:
 		c.done <- err
+		os.Remove(c.socket) // empty now
 		var exit *exec.ExitError
 		if errors.As(err, &exit) && exit.ExitCode() != 0 && exit.ExitCode() != -1 {
 			return fmt.Errorf("postgres ended badly: %w", err)

@@ -4,6 +4,8 @@ import (
 	"context"
 	"os"
 	"path/filepath"
+	"strings"
+	"syscall"
 	"testing"
 
 	"github.com/jackc/pgx/v5"
@@ -102,5 +104,29 @@ func TestEveryTableBelongsToALab(t *testing.T) {
 	}
 	if n < 15 {
 		t.Errorf("only %d tables", n)
+	}
+}
+
+// What others put where the socket's folder should be is not used.
+func TestSocketFolderOfOthers(t *testing.T) {
+	t.Parallel()
+	ctx := context.Background()
+	dir := filepath.Join(t.TempDir(), "data")
+	socket := postgres.SocketFolder(dir)
+	elsewhere := t.TempDir()
+	if err := os.Symlink(elsewhere, socket); err != nil {
+		t.Fatal(err)
+	}
+	t.Cleanup(func() { os.Remove(socket) })
+	before, err := os.Stat(elsewhere)
+	if err != nil {
+		t.Fatal(err)
+	}
+	if _, err := postgres.Start(ctx, dir); err == nil || !strings.Contains(err.Error(), "belongs to somebody else") {
+		t.Errorf("a link in place of the folder: %v", err)
+	}
+	after, err := os.Stat(elsewhere)
+	if err != nil || before.Mode() != after.Mode() || before.Sys().(*syscall.Stat_t).Uid != after.Sys().(*syscall.Stat_t).Uid {
+		t.Errorf("the folder behind the link was changed: %v, %v", after, err)
 	}
 }

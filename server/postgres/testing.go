@@ -32,11 +32,30 @@ var (
 	testNumber  atomic.Int64
 )
 
+// sweep removes what earlier test binaries left: folders in which no cluster runs any more.
+func sweep() {
+	left, _ := filepath.Glob(filepath.Join(os.TempDir(), testFolder+"*"))
+	for _, dir := range left {
+		cluster := filepath.Join(dir, "postgres")
+		info, err := os.Stat(dir)
+		// A young folder may belong to a test that is just starting.
+		if err != nil || time.Since(info.ModTime()) < 10*time.Minute || runningIn(filepath.Join(cluster, "cluster")) > 0 {
+			continue
+		}
+		os.RemoveAll(dir)
+		os.RemoveAll(socketFolder(cluster))
+	}
+}
+
+// testFolder begins the names of the folders of test clusters.
+const testFolder = "distal-test-"
+
 // startTestCluster starts one cluster for the test binary, with a migrated
 // template. It ends with the process (Pdeathsig); its folder is a temporary one.
 func startTestCluster() (*Cluster, error) {
 	ctx := context.Background()
-	dir, err := os.MkdirTemp("", "distal-test-")
+	sweep()
+	dir, err := os.MkdirTemp("", testFolder)
 	if err != nil {
 		return nil, err
 	}

@@ -95,19 +95,20 @@ func (s *Store) FindKeys(ctx context.Context, lab uuid.UUID) (sealed []byte, pub
 func (s *Store) PublicKeys(ctx context.Context) (bundle.KeySet, error) {
 	rows, err := s.pool.Query(ctx, `SELECT public_keys()`)
 	if err != nil {
-		return bundle.KeySet{}, err
+		return bundle.KeySet{}, interpret(err)
 	}
 	keys, err := pgx.CollectRows(rows, pgx.RowTo[bundle.PublicKey])
-	return bundle.KeySet{Keys: keys}, err
+	return bundle.KeySet{Keys: keys}, interpret(err)
 }
 
 // Labs are the identifiers of all labs, oldest first.
 func (s *Store) Labs(ctx context.Context) ([]uuid.UUID, error) {
 	rows, err := s.pool.Query(ctx, `SELECT all_labs()`)
 	if err != nil {
-		return nil, err
+		return nil, interpret(err)
 	}
-	return pgx.CollectRows(rows, pgx.RowTo[uuid.UUID])
+	labs, err := pgx.CollectRows(rows, pgx.RowTo[uuid.UUID])
+	return labs, interpret(err)
 }
 
 // LabName is the name of a lab.

@@ -94,7 +94,7 @@ func (s *Store) Close() {
 }
 
 // Ping tells whether the database answers.
-func (s *Store) Ping(ctx context.Context) error { return s.pool.Ping(ctx) }
+func (s *Store) Ping(ctx context.Context) error { return interpret(s.pool.Ping(ctx)) }
 
 // InLab runs f in a transaction that sees the rows of one lab only.
 func (s *Store) InLab(ctx context.Context, lab uuid.UUID, f func(tx pgx.Tx) error) error {

@@ -83,7 +83,7 @@ func (s *Store) FindStudy(ctx context.Context, lab, id uuid.UUID) (study Study, 
 func (s *Store) FindStudyByLink(ctx context.Context, link string) (lab uuid.UUID, study Study, err error) {
 	var found *uuid.UUID
 	if err := s.pool.QueryRow(ctx, `SELECT lab_of_link($1)`, link).Scan(&found); err != nil {
-		return uuid.Nil, Study{}, err
+		return uuid.Nil, Study{}, interpret(err)
 	}
 	if found == nil {
 		return uuid.Nil, Study{}, ErrNotFound
