@@ -55,8 +55,8 @@ func Steps(deltaMs, refreshMs float64) int {
 	return max(1, int(exact.Round(deltaMs/refreshMs)))
 }
 
-// Frames is the number of refresh intervals nearest to a duration, at least 1
-// for durations above 0.
+// Frames is the number of refresh intervals nearest to a duration, the larger
+// of two equally near, at least 1 for durations above 0.
 func Frames(durationMs, refreshMs float64) int {
 	if durationMs <= 0 {
 		return 0
