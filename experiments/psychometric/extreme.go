@@ -162,16 +162,19 @@ const (
 	// fewLevels is the number of levels up to which that holds; an adaptive track with a
 	// trial or two at each of many levels can have a second maximum anywhere.
 	fewLevels = 12
-	// nearStepSpread, in smallest gaps, is where a climb from near a step starts.
-	nearStepSpread = 1.0
 )
+
+// nearStepSpreads, in smallest gaps between levels, are where climbs from near a step start.
+var nearStepSpreads = []float64{1, 0.3}
 
 // summit finds the supremum: climbs from the regression and from near the good steps
 // and, unless that settles it, from the grid's starts. With a free lapse rate every climb is
 // repeated with more lapses, because pairs of maxima at the two ends of its range are common.
 func (p *problem) summit() summit {
 	s := summit{maximum: maximum{value: math.Inf(-1)}}
-	s.take(p, p.regression())
+	for _, lapse := range p.lapseStarts(nil) {
+		s.keep(p.climb(p.regression(lapse)))
+	}
 	s.constant = p.constantLimit()
 	s.step = limit{value: math.Inf(-1)}
 	if p.free[iSlope] {
@@ -200,13 +203,14 @@ func (p *problem) summit() summit {
 
 // climbFromSteps climbs from slopes a little below infinite.
 func (s *summit) climbFromSteps(p *problem) {
-	spread := math.Max(nearStepSpread*p.smallestGap(), 0.02)
-	slope := math.Min(math.Log(p.model.Shape.width()/spread), p.high[iSlope])
+	gap := p.smallestGap()
 	var room [6]int
 	for _, j := range p.stepPeaks(s.value, clearLead, room[:0]) {
 		near := p.step(j).theta
-		near[iSlope] = slope
-		s.take(p, near)
+		for _, spread := range nearStepSpreads {
+			near[iSlope] = math.Log(p.model.Shape.width() / math.Max(spread*gap, 0.02))
+			s.take(p, near)
+		}
 	}
 }
 
@@ -219,18 +223,23 @@ func (s *summit) leaveStep(p *problem) {
 	}
 }
 
-// take climbs from start, and again with another lapse rate if it is free.
+// take climbs from start with every lapse rate to start from.
 func (s *summit) take(p *problem, start vector) {
-	s.keep(p.climb(start))
-	if p.free[iLapse] {
-		low, extent := p.low[iLapse], p.high[iLapse]-p.low[iLapse]
-		if start[iLapse] < low+extent/2 {
-			start[iLapse] = low + 0.7*extent
-		} else {
-			start[iLapse] = low + 0.1*extent
-		}
+	var room [2]float64
+	for _, start[iLapse] = range p.lapseStarts(room[:0]) {
 		s.keep(p.climb(start))
 	}
+}
+
+// lapseStarts are the lapse rates to start from: the fixed one, or few and many lapses.
+func (p *problem) lapseStarts(list []float64) []float64 {
+	if !p.free[iLapse] {
+		return append(list, p.low[iLapse])
+	}
+	for _, share := range startLapses {
+		list = append(list, p.low[iLapse]+share*(p.high[iLapse]-p.low[iLapse]))
+	}
+	return list
 }
 
 func (s *summit) keep(m maximum) {

@@ -45,7 +45,8 @@ type Estimate struct {
 	// information; 0 where there is none (not estimated, or at the edge of its range).
 	SE         float64 `json:"se"`
 	SEObserved float64 `json:"se_observed"`
-	// Interval is the profile-likelihood interval (Fit) or the Wald interval (Maximise).
+	// Interval is the profile-likelihood interval (Fit), that of the threshold steadied as
+	// described at Model.PlainProfile, or the Wald interval (Maximise).
 	Interval Interval `json:"interval"`
 }
 
@@ -223,7 +224,11 @@ func (p *problem) scaled(t float64) float64 {
 func (r *Result) profiles(p *problem, s *summit, wanted profiling) {
 	target := s.value - drop(r.Model.confidence())
 	if s.outcome == levelLike {
-		if i, ok := p.survey(target); ok {
+		q := p
+		if p.free[iSlope] && !r.Model.PlainProfile {
+			q = p.steadied()
+		}
+		if i, ok := q.survey(target); ok {
 			r.setThresholdInterval(p, i)
 		}
 		return
@@ -232,7 +237,7 @@ func (r *Result) profiles(p *problem, s *summit, wanted profiling) {
 	if r.OnScale.SE > 0 {
 		step = clamp(r.OnScale.SE/p.width, 1e-3, 1)
 	}
-	r.setThresholdInterval(p, p.interval(iThreshold, s, step, target))
+	r.setThresholdInterval(p, p.thresholdInterval(s, step))
 	if wanted == profileThreshold {
 		return
 	}

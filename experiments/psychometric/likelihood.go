@@ -25,6 +25,10 @@ type problem struct {
 	free      [3]bool
 	low, high vector
 
+	// steady adds the weight on steep slopes described at steadied to L.
+	steady    bool
+	reference float64 // ln slope above which it works
+
 	start startTable
 	steps []candidate
 }
@@ -125,6 +129,9 @@ func (p *problem) value(theta vector) float64 {
 		s := p.at(beta*(z-theta[iThreshold])+q, z)
 		l += logLikelihood(p.n[i], p.k[i], bottom+rise*s.f, lapse+rise*s.c)
 	}
+	if over := theta[iSlope] - p.reference; p.steady && over > 0 {
+		l -= over * over / 2
+	}
 	return l
 }
 
@@ -182,6 +189,12 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 		if p.free[iLapse] {
 			d.addLapse(w, s, beta, v, rise, q, p.model.Symmetric)
 		}
+	}
+	if over := theta[iSlope] - p.reference; p.steady && over > 0 {
+		d.value -= over * over / 2
+		d.gradient[iSlope] -= over
+		d.expected[iSlope][iSlope]++
+		d.observed[iSlope][iSlope]++
 	}
 	d.mirror()
 }

@@ -111,6 +111,11 @@ type Model struct {
 	Slope float64
 	// Criterion of the threshold.
 	Criterion Criterion
+	// PlainProfile takes the threshold's interval from the profile of the likelihood as it
+	// is. Otherwise, slopes so steep that F rises from 0.1 to 0.9 within less than the tested
+	// range are given less weight, L − ½ ln²(range/spread), because plain intervals are too
+	// short in small samples. Estimates, standard errors and other intervals are not affected.
+	PlainProfile bool
 	// Confidence of the intervals; 0 means 0.95.
 	Confidence float64
 }

@@ -5,6 +5,15 @@ import "math"
 // A profile interval of a parameter holds the values at which the likelihood,
 // maximised over all other parameters, stays within half the χ²(1) quantile of its
 // supremum. It needs no symmetry and can be open.
+//
+// For the threshold the plain profile interval is too short in small samples: with some
+// eighty trials the likelihood is often greatest at an almost infinite slope, for which
+// the threshold seems known very well, and a nominal 95% interval covers 87 to 93%. The
+// interval of the threshold therefore comes from a steadied likelihood, in which slopes
+// that would take the function from F = 0.1 to 0.9 within less than the tested range count
+// less: L − ½ ln²(range/spread) for spread < range. The range is √12 standard deviations
+// of the levels over trials, which for evenly spaced levels is their range. The drill
+// BenchmarkCoverage prints what is covered with and without.
 
 // span is an interval on the standardised scale; an open side ends at the search's bound.
 type span struct {
@@ -51,13 +60,10 @@ const scanStep = 1.1
 // rate of theta and, if it is free, with few and with many lapses.
 func (p *problem) scan(theta vector) (vector, float64) {
 	best, value := theta, math.Inf(-1)
-	lapses := [3]float64{theta[iLapse]}
-	count := 1
+	var room [3]float64
+	lapses := append(room[:0], theta[iLapse])
 	if p.free[iLapse] {
-		for _, share := range startLapses {
-			lapses[count] = p.low[iLapse] + share*(p.high[iLapse]-p.low[iLapse])
-			count++
-		}
+		lapses = p.lapseStarts(lapses)
 	}
 	index, step := iSlope, scanStep
 	from, to := p.low[iSlope], p.high[iSlope]
@@ -67,7 +73,7 @@ func (p *problem) scan(theta vector) (vector, float64) {
 			from, to = theta[iThreshold], theta[iThreshold]
 		}
 	}
-	for _, lapse := range lapses[:count] {
+	for _, lapse := range lapses {
 		for x := from; ; x = math.Min(x+step, to) {
 			t := theta
 			t[index], t[iLapse] = x, lapse
@@ -232,4 +238,48 @@ func (p *problem) survey(target float64) (i span, ok bool) {
 		i.high = p.crossing(iThreshold, list[last], list[last+1], target)
 	}
 	return i, true
+}
+
+// steadied is the problem with the weight on steep slopes.
+func (p *problem) steadied() *problem {
+	n, sum, squares := 0.0, 0.0, 0.0
+	from, to := p.finite()
+	for i := from; i < to; i++ {
+		n += p.n[i]
+		sum += p.n[i] * p.z[i]
+		squares += p.n[i] * p.z[i] * p.z[i]
+	}
+	mean := sum / n
+	reach := math.Sqrt(12 * math.Max(squares/n-mean*mean, 1e-12))
+	q := *p
+	q.steady = true
+	q.reference = math.Log(p.model.Shape.width() / reach)
+	return &q
+}
+
+// steadiedMaximum is the maximum of the steadied likelihood, s being the plain one's.
+func (p *problem) steadiedMaximum(s *summit) maximum {
+	best := p.climb(s.theta)
+	for over := 2.0; over >= -1; over-- {
+		start := s.theta
+		start[iSlope] = p.reference + over
+		if m := p.climb(start); m.value > best.value {
+			best = m
+		}
+	}
+	return best
+}
+
+// thresholdInterval is the interval of the threshold around a function or a step.
+func (p *problem) thresholdInterval(s *summit, step float64) span {
+	fall := drop(p.model.confidence())
+	if p.model.PlainProfile || !p.free[iSlope] {
+		return p.interval(iThreshold, s, step, s.value-fall)
+	}
+	q := p.steadied()
+	steady := summit{maximum: q.steadiedMaximum(s)}
+	i := q.interval(iThreshold, &steady, step, steady.value-fall)
+	i.low = math.Min(i.low, s.theta[iThreshold])
+	i.high = math.Max(i.high, s.theta[iThreshold])
+	return i
 }

@@ -8,12 +8,8 @@ const regressionGroups = 8
 // regression gives a start: the line u = β (z − α) through the transformed proportions
 // of groups of neighbouring levels with about equal numbers of trials, weighted by their
 // information as in one step of an iterated probit analysis (Finney DJ, Probit
-// Analysis, 3rd ed. 1971). Proportions are kept off the asymptotes.
-func (p *problem) regression() vector {
-	lapse := p.low[iLapse]
-	if p.free[iLapse] {
-		lapse += 0.2 * (p.high[iLapse] - lapse)
-	}
+// Analysis, 3rd ed. 1971), with the given lapse rate. Proportions are kept off the asymptotes.
+func (p *problem) regression(lapse float64) vector {
 	sum := regressionSums{problem: p, lapse: lapse}
 	from, to := p.finite()
 	total := 0.0

@@ -21,7 +21,7 @@ type startTable struct {
 }
 
 // maxGroups of levels: pooling costs little at the grid's coarseness.
-const maxGroups = 12
+const maxGroups = 24
 
 // startSpreads are the spreads tried, as shares of the tested range.
 var startSpreads = []float64{0.05, 0.12, 0.25, 0.5, 1, 2.5}
@@ -38,13 +38,7 @@ func (p *problem) prepareStarts() {
 	t := &p.start
 	t.group = make([]int, len(p.z))
 	center := p.pool()
-	lapses := []float64{p.low[iLapse]}
-	if p.free[iLapse] {
-		lapses = lapses[:0]
-		for _, share := range startLapses {
-			lapses = append(lapses, p.low[iLapse]+share*(p.high[iLapse]-p.low[iLapse]))
-		}
-	}
+	lapses := p.lapseStarts(nil)
 	slopes := p.startSlopes()
 	t.slopes = len(slopes)
 	for _, lapse := range lapses {
