@@ -64,6 +64,33 @@ const (
 // ScaleNames are the names in study files, indexed by Scale.
 var ScaleNames = []string{"log10", "linear"}
 
+// Prior is how likely the thresholds considered are before the first trial.
+type Prior int
+
+// Priors, named in study files as in PriorNames. RaisedCosine is ten times as
+// likely in the middle of the range, on the scale, as at its ends; halfway out it is
+// as likely as Uniform.
+const (
+	RaisedCosine Prior = iota
+	Uniform
+)
+
+// PriorNames are the names in study files, indexed by Prior.
+var PriorNames = []string{"raised_cosine", "uniform"}
+
+// DefaultSlopes are quantiles, at 1/12, 3/12, … 11/12, of a log-normal
+// distribution with median 3 and standard deviation 0.4 of the natural
+// logarithm, so that taking them as equally likely is taking that distribution:
+// nine in ten from 1.6 to 5.8. Two-alternative functions of detection and
+// discrimination mostly lie there (common practice, no source).
+func DefaultSlopes() []float64 { return []float64{1.73, 2.29, 2.76, 3.26, 3.93, 5.22} }
+
+// DefaultLapses are quantiles, at 1/8, 3/8, 5/8 and 7/8, of a beta distribution
+// with mean 0.02 and standard deviation 0.014, Beta(2, 98). Attentive observers
+// lapse in 0 to 6 % of trials (Wichmann FA, Hill NJ 2001, Percept Psychophys
+// 63:1293, whose constraint this is).
+func DefaultLapses() []float64 { return []float64{0.006, 0.013, 0.021, 0.036} }
+
 // Spec is a procedure as written in a study file. Which fields matter depends on Method.
 type Spec struct {
 	Method    Method
@@ -90,7 +117,8 @@ type Spec struct {
 	// QuestPlus (Watson 2017): Weibull on the chosen scale.
 	ThresholdMin, ThresholdMax float64
 	ThresholdCount             int
-	Slopes                     []float64
+	Prior                      Prior     // over ThresholdMin to ThresholdMax
+	Slopes                     []float64 // equally likely beforehand; so are the lapse rates
 	Lapses                     []float64
 	Guess                      float64
 	LevelCount                 int     // levels from Min to Max, evenly on the scale

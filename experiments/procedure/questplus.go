@@ -16,9 +16,10 @@ import (
 // so T is the level with F = 1 − 1/e. Each trial is placed where the expected
 // entropy of the whole posterior is least or, with Nuisance, where the expected
 // variance of log T is least after slope and lapse are summed out: trials are
-// spent on the threshold alone (Prins N 2013, J Vis 13(7):3, who takes the
-// entropy of that marginal; the variance is what an estimate is judged by, and
-// it is closer to the bound from 80 trials on).
+// spent on the threshold alone (Prins N 2013, J Vis 13(7):3). Prins takes the
+// entropy of that marginal; the variance is what an estimate is judged by. It is
+// reckoned in units of the function's own spread, 1/b, or else the few shallow
+// functions still considered, with their wide errors, would choose the levels.
 type questPlus struct {
 	spec       Spec
 	thresholds []float64 // log10 of threshold
@@ -30,8 +31,11 @@ type questPlus struct {
 	// joint entropy only.
 	doubt     []float64
 	posterior []float64 // [threshold][cell]
-	mass      []float64 // of each threshold, slope and lapse summed out
-	centre    float64   // mean log threshold
+	// scaled is the posterior times slope squared, mass its sum over the cells
+	// of each threshold, centre the mean log threshold that it gives.
+	scaled []float64
+	mass   []float64
+	centre float64
 	trials    int
 	level     [1]float64
 	chosen    int
@@ -48,11 +52,10 @@ func newQuestPlus(s Spec) *questPlus {
 	q.levels = grid(s.Scale, s.Min, s.Max, s.LevelCount)
 	q.right = make([]float64, len(q.levels)*len(q.thresholds)*q.cells)
 	q.posterior = make([]float64, len(q.thresholds)*q.cells)
-	for i := range q.posterior {
-		q.posterior[i] = 1 / float64(len(q.posterior))
-	}
+	q.scaled = make([]float64, len(q.posterior))
 	q.mass = make([]float64, len(q.thresholds))
 	q.tabulate()
+	q.setPrior()
 	q.marginalise()
 	return q
 }
@@ -100,16 +103,53 @@ func (q *questPlus) tabulate() {
 	}
 }
 
-// marginalise sums slope and lapse out of the posterior.
+// setPrior weighs the thresholds; slopes and lapse rates are equally likely.
+func (q *questPlus) setPrior() {
+	total := 0.0
+	for t := range q.thresholds {
+		weight := 1.0
+		if q.spec.Prior == RaisedCosine {
+			share := float64(t) / float64(len(q.thresholds)-1)
+			weight = priorFloor + float64((1-priorFloor)*(0.5-float64(0.5*exact.Cos(float64(2*exact.Pi*share)))))
+		}
+		for c := t * q.cells; c < (t+1)*q.cells; c++ {
+			q.posterior[c] = weight
+			total += weight
+		}
+	}
+	for c := range q.posterior {
+		q.posterior[c] /= total
+	}
+}
+
+// priorFloor is the weight of the ends of the range, relative to its middle.
+const priorFloor = 0.1
+
+// marginalise sums slope and lapse out of the scaled posterior.
 func (q *questPlus) marginalise() {
-	q.centre = 0
+	if !q.spec.Nuisance {
+		return
+	}
+	total, moment, c := 0.0, 0.0, 0
 	for t := range q.thresholds {
 		sum := 0.0
-		for _, p := range q.posterior[t*q.cells : (t+1)*q.cells] {
-			sum += p
+		for _, slope := range q.spec.Slopes {
+			for range q.spec.Lapses {
+				q.scaled[c] = float64(q.posterior[c] * slope * slope)
+				sum += q.scaled[c]
+				c++
+			}
 		}
 		q.mass[t] = sum
-		q.centre += float64(sum * q.thresholds[t])
+		total += sum
+		moment += float64(sum * q.thresholds[t])
+	}
+	q.centre = moment / total
+	for t := range q.mass {
+		q.mass[t] /= total
+	}
+	for c := range q.scaled {
+		q.scaled[c] /= total
 	}
 }
 
@@ -154,13 +194,13 @@ func plogp(p float64) float64 {
 	return float64(-p * exact.Log(p))
 }
 
-// negligible is the posterior mass of a threshold below which it cannot
-// change the choice of a level.
-const negligible = 1e-12
+// negligible is the share of a threshold below which it cannot change the
+// choice of a level.
+const negligible = 1e-9
 
 // marginalVariance is the expected variance of log threshold after a trial at
 // level i, up to what is the same for all levels: with m_r = Σ_T p(r,T) (T − T̄)
-// it is a constant less Σ_r m_r² / p(r).
+// it is a constant less Σ_r m_r² / p(r), p being the scaled posterior.
 func (q *questPlus) marginalVariance(i int) float64 {
 	n := len(q.posterior)
 	right := q.right[i*n : (i+1)*n]
@@ -170,7 +210,7 @@ func (q *questPlus) marginalVariance(i int) float64 {
 			continue
 		}
 		from, to := t*q.cells, (t+1)*q.cells
-		a := dot(q.posterior[from:to], right[from:to])
+		a := dot(q.scaled[from:to], right[from:to])
 		x := q.thresholds[t] - q.centre
 		hit += a
 		hitMoment += float64(a * x)

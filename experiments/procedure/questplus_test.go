@@ -56,7 +56,7 @@ func TestQuestPlusWorkedRun(t *testing.T) {
 	q := newQuestPlus(Spec{
 		Method: QuestPlus, Min: exact.Exp10(-1.6), Max: exact.Exp10(-0.8), LevelCount: 5, MaxTrials: 4,
 		ThresholdMin: exact.Exp10(-1.4), ThresholdMax: 0.1, ThresholdCount: 3,
-		Slopes: example.Beta, Lapses: []float64{0.02}, Guess: 0.5,
+		Slopes: example.Beta, Lapses: []float64{0.02}, Guess: 0.5, Prior: Uniform,
 	})
 	for i, step := range example.Steps {
 		prior := entropy(q.posterior)
@@ -137,7 +137,7 @@ func TestPosteriorWorkedRun(t *testing.T) {
 func defaultSpec() Spec {
 	return Spec{
 		Method: QuestPlus, Min: 0.01, Max: 1, LevelCount: 60, MaxTrials: 60, ThresholdMin: 0.01, ThresholdMax: 1,
-		ThresholdCount: 100, Slopes: []float64{1, 1.5, 2, 2.8, 4, 5.6}, Lapses: []float64{0, 0.02, 0.05}, Guess: 0.5, Nuisance: true,
+		ThresholdCount: 100, Slopes: DefaultSlopes(), Lapses: DefaultLapses(), Guess: 0.5, Nuisance: true,
 	}
 }
 

@@ -390,11 +390,12 @@ func walkProcedure(c *codec, p *ProcedureSpec) {
 	c.whole("easier_is", &p.EasierIs, num{Min: -1, Max: 1, Default: 1}, "+1: a higher level is easier, −1: a lower one")
 	c.number("threshold_min", &p.ThresholdMin, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: lowest threshold considered, 0: min")
 	c.number("threshold_max", &p.ThresholdMax, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: highest threshold considered, 0: max")
-	c.whole("threshold_count", &p.ThresholdCount, num{Min: 2, Max: 400, Default: 60}, "quest_plus: thresholds considered, evenly on the scale")
-	c.numbers("slopes", &p.Slopes, num{Min: 0.01, Max: 100}, "quest_plus: Weibull slopes considered")
-	c.numbers("lapses", &p.Lapses, num{Min: 0, Max: 0.5}, "quest_plus: lapse rates considered")
+	c.whole("threshold_count", &p.ThresholdCount, num{Min: 2, Max: 400, Default: 80}, "quest_plus: thresholds considered, evenly on the scale")
+	oneOf(c, "prior", &p.Prior, procedure.PriorNames, procedure.RaisedCosine, false, "quest_plus: how likely the thresholds are beforehand: raised_cosine is ten times as likely in the middle as at the ends")
+	c.numbers("slopes", &p.Slopes, num{Min: 0.01, Max: 100}, "quest_plus: Weibull slopes considered, equally likely")
+	c.numbers("lapses", &p.Lapses, num{Min: 0, Max: 0.5}, "quest_plus: lapse rates considered, equally likely")
 	c.number("guess", &p.Guess, num{Min: 0, Max: 0.9, Default: 0.5}, "proportion correct by guessing")
-	c.whole("level_count", &p.LevelCount, num{Min: 2, Max: 400, Default: 40}, "quest_plus: levels from min to max, evenly on the scale")
+	c.whole("level_count", &p.LevelCount, num{Min: 2, Max: 400, Default: 60}, "quest_plus: levels from min to max, evenly on the scale")
 	c.number("stop_sd_log10", &p.StopSDLog10, num{Min: 0, Max: 2}, "quest_plus: ends when the posterior sd of the threshold is below, 0: never")
 	c.flag("nuisance", &p.Nuisance, true, "quest_plus: slope and lapse are integrated out (Prins 2013)")
 	if c.mode == reading {
@@ -408,10 +409,10 @@ func fillProcedure(p *procedure.Spec) {
 		p.ThresholdMin, p.ThresholdMax = p.Min, p.Max
 	}
 	if len(p.Slopes) == 0 {
-		p.Slopes = []float64{1, 1.5, 2, 2.8, 4, 5.6}
+		p.Slopes = procedure.DefaultSlopes()
 	}
 	if len(p.Lapses) == 0 {
-		p.Lapses = []float64{0, 0.02, 0.05}
+		p.Lapses = procedure.DefaultLapses()
 	}
 	if len(p.StepsUp) == 0 {
 		p.StepsUp = []float64{0.2, 0.1}
