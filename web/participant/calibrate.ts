@@ -94,7 +94,7 @@ function oneCard(n: number, of: number, complaint: string): Promise<number> {
     draw();
     show(
       "card", say("card_title"), complaintLine, h("p", {}, say("card_text")),
-      h("p", { class: "small" }, say("card_nth", { n, of }), " ", say("card_keys")), card,
+      h("p", { class: "small" }, say("card_nth", { n, of }), " ", say("card_keys")), h("div", { class: "card-place" }, card),
       h("div", { class: "actions" }, button(say("continue"), "continue", finish)),
       h("p", { class: "small" }, say("card_privacy")),
     );

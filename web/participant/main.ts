@@ -442,7 +442,7 @@ class Participation {
     const code = this.outbox.last?.completion_code ?? "";
     const address = this.outbox.last?.return_url ?? null;
     const copied = h("span", { role: "status" });
-    show("done", say("done_title"), ...paragraphs("done_stored"), h("p", {}, `${say("done_code")}: `, h("output", { class: "code", test: "code" }, code)),
+    show("done", say("done_title"), ...paragraphs("done_stored"), h("p", {}, say("done_code"), h("output", { class: "code", test: "code" }, code)),
       h("p", { class: "small" }, say("done_keep")),
       h("div", { class: "actions" },
         button(say("done_copy"), "copy-code", () => void navigator.clipboard?.writeText(code).then(() => (copied.textContent = say("done_copied"))), "quiet"),

@@ -90,9 +90,9 @@ function field(name: string, q: Question, language: string): HTMLElement {
       return h("fieldset", {}, h("legend", {}, ask), h("div", { class: "scale" }, h("span", {}, inLanguage(q.low_end, language)), radios(group, points), h("span", {}, inLanguage(q.high_end, language))));
     }
     case "number":
-      return h("p", {}, h("label", { for: group }, ask), " ", h("input", { type: "number", id: group, test: group, step: "any", min: String(q.min), max: String(q.max) }), " ", q.unit);
+      return h("p", { class: "field" }, h("label", { for: group }, ask), " ", h("input", { type: "number", id: group, test: group, step: "any", min: String(q.min), max: String(q.max) }), " ", q.unit);
     case "text":
-      return h("p", {}, h("label", { for: group }, ask), h("textarea", { id: group, test: group, rows: "3", maxlength: "4000" }));
+      return h("p", { class: "field" }, h("label", { for: group }, ask), h("textarea", { id: group, test: group, rows: "3", maxlength: "4000" }));
   }
 }
 
