@@ -21,15 +21,17 @@ import (
 // readStudy reads a study file, or a study of the library by name, and adds
 // the problems of its exclusion rules.
 func readStudy(name string) (*study.Study, study.Problems) {
-	var s *study.Study
-	var problems study.Problems
+	fsys, file := os.DirFS(filepath.Dir(name)), filepath.Base(name)
 	if _, err := os.Stat(name); err != nil && isLibrary(name) {
-		s, problems = library.Read(name)
-	} else {
-		s, problems = studyfile.Read(os.DirFS(filepath.Dir(name)), filepath.Base(name))
+		files, err := library.Files(name)
+		if err != nil {
+			return nil, study.Problems{{Message: err.Error()}}
+		}
+		fsys, file = files, "study.yaml"
 	}
+	s, problems := studyfile.Read(fsys, file)
 	if s != nil && !problems.Failed() {
-		problems = append(problems, quality.Check(s)...)
+		problems = append(problems, studyfile.Locate(fsys, file, quality.Check(s))...)
 	}
 	return s, problems
 }
@@ -64,52 +66,9 @@ func (c *checkCommand) Run() error {
 
 // printProblems prints each problem with the line that it is about.
 func printProblems(file string, problems study.Problems) {
-	lines := map[string][]string{}
-	for _, p := range problems {
-		fmt.Println(p.String())
-		if p.Pos.Line == 0 {
-			continue
-		}
-		path := filepath.Join(filepath.Dir(file), filepath.Base(p.Pos.File))
-		if _, ok := lines[path]; !ok {
-			text, _ := os.ReadFile(path)
-			lines[path] = splitLines(string(text))
-		}
-		if all := lines[path]; p.Pos.Line <= len(all) {
-			fmt.Printf("    %s\n    %s^\n", all[p.Pos.Line-1], blanks(all[p.Pos.Line-1], p.Pos.Column-1))
-		}
+	if err := studyfile.Print(os.Stdout, os.DirFS(filepath.Dir(file)), problems); err != nil {
+		fmt.Fprintln(os.Stderr, "the problems cannot be printed:", err)
 	}
-}
-
-// blanks is white space as wide as the first n columns of line.
-func blanks(line string, n int) string {
-	out := []rune{}
-	for i, r := range []rune(line) {
-		if i >= n {
-			break
-		}
-		if r != '\t' {
-			r = ' '
-		}
-		out = append(out, r)
-	}
-	return string(out)
-}
-
-func splitLines(s string) []string {
-	var lines []string
-	for len(s) > 0 {
-		i := 0
-		for i < len(s) && s[i] != '\n' {
-			i++
-		}
-		lines = append(lines, s[:i])
-		if i == len(s) {
-			break
-		}
-		s = s[i+1:]
-	}
-	return lines
 }
 
 type schemaCommand struct {

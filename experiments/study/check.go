@@ -2,6 +2,8 @@ package study
 
 import (
 	"math"
+	"strconv"
+	"strings"
 
 	"distal/experiments/display"
 	"distal/experiments/procedure"
@@ -12,78 +14,116 @@ import (
 type checker struct {
 	s        *Study
 	root     value.Value
+	reading  Problems // found while reading: what they are about is not checked further
 	problems *Problems
 }
 
 func check(s *Study, root value.Value, problems *Problems) {
-	c := &checker{s, root, problems}
+	c := &checker{s, root, *problems, problems}
 	c.about()
 	c.screen()
-	for i := range s.Displays {
-		c.display(&s.Displays[i])
-	}
-	for i := range s.Tasks {
-		c.task(&s.Tasks[i])
-	}
-	for i := range s.Procedures {
-		c.procedure(&s.Procedures[i])
-	}
-	names := map[string]bool{}
-	for i := range s.Blocks {
-		c.block(i, &s.Blocks[i])
-		if names[s.Blocks[i].Name] {
-			c.report(false, "two blocks have the name "+quote(s.Blocks[i].Name), "blocks", i, "name")
-		}
-		names[s.Blocks[i].Name] = true
-	}
+	c.displays()
+	c.tasks()
+	c.procedures()
+	c.blocks()
+	c.groups()
+	c.orders()
 	for i := range s.Questions {
 		c.question(&s.Questions[i])
 	}
 }
 
-// report adds a problem at the place that keys lead to: texts are mapping keys, numbers list indices.
-func (c *checker) report(warning bool, message string, keys ...any) {
-	v, path := c.root, ""
+// broken tells whether reading the thing at path, a part of it or what it is
+// part of found a problem.
+func (c *checker) broken(path string) bool {
+	for i := range c.reading {
+		if p := c.reading[i].Path; p != "" && (within(p, path) || within(path, p)) {
+			return true
+		}
+	}
+	return false
+}
+
+// within tells whether path is outer or a part of it.
+func within(path, outer string) bool {
+	rest, ok := strings.CutPrefix(path, outer)
+	return ok && (rest == "" || rest[0] == '.' || rest[0] == '[')
+}
+
+// fail reports a contradiction at the place that keys lead to: texts are
+// mapping keys, numbers list indices.
+func (c *checker) fail(message string, keys ...any) { c.report(false, message, keys) }
+
+// warn reports something worth a second look.
+func (c *checker) warn(message string, keys ...any) { c.report(true, message, keys) }
+
+func (c *checker) report(warning bool, message string, keys []any) {
+	p := Problem{Message: message, Warning: warning}
+	v := c.root
 	for _, k := range keys {
 		switch k := k.(type) {
 		case string:
-			if path != "" {
-				path += "."
+			if p.Path != "" {
+				p.Path += "."
 			}
-			path += k
-			if next, ok := v.Get(k); ok {
-				v = next
+			p.Path += k
+			for _, m := range v.Members {
+				if m.Key != k {
+					continue
+				}
+				v = m.Value
+				p.Pos, p.Offending = v.Pos, v.Raw
+				if v.Kind >= value.Sequence {
+					p.Pos, p.Offending = m.KeyPos, m.Key
+				}
+				break
 			}
 		case int:
-			path += "[" + formatNumber(float64(k+1)) + "]"
+			p.Path += "[" + strconv.Itoa(k+1) + "]"
 			if k < len(v.Items) {
 				v = v.Items[k]
+				p.Pos, p.Offending = v.Pos, v.Raw
 			}
 		}
 	}
-	*c.problems = append(*c.problems, Problem{Pos: v.Pos, Path: path, Offending: v.Raw, Message: message, Warning: warning})
+	if p.Pos.Line == 0 {
+		p.Pos = c.root.Pos
+	}
+	*c.problems = append(*c.problems, p)
 }
 
 func (c *checker) about() {
-	for _, language := range c.s.About.Languages {
-		found := false
-		for i := range c.s.Texts {
-			found = found || c.s.Texts[i].Language == language
+	for i, language := range c.s.About.Languages {
+		if contains(c.s.About.Languages[:i], language) {
+			c.fail("language "+quote(language)+" stands twice", "about", "languages", i)
 		}
-		if !found {
-			c.report(false, "there are no texts in language "+quote(language), "about", "languages")
+		found := false
+		for j := range c.s.Texts {
+			found = found || c.s.Texts[j].Language == language
+		}
+		if !found && !c.broken("texts") && c.has("texts") {
+			c.fail("there are no texts in language "+quote(language), "about", "languages", i)
 		}
 	}
 	for i := range c.s.Texts {
-		if len(Statements(c.s.Texts[i].Consent)) == 0 {
-			c.report(false, "the consent text of language "+quote(c.s.Texts[i].Language)+
+		language := c.s.Texts[i].Language
+		if !c.broken("texts."+language) && len(Statements(c.s.Texts[i].Consent)) == 0 {
+			c.fail("the consent text of language "+quote(language)+
 				" has no statements: write each as a list item (a line that begins with \"- \")", "texts")
 		}
 	}
 	p := c.s.Participants
-	if p.MaxAgeYears > 0 && p.MaxAgeYears < p.MinAgeYears {
-		c.report(false, "max_age_years is below min_age_years", "participants", "max_age_years")
+	if p.MaxAgeYears > 0 && p.MaxAgeYears < p.MinAgeYears && !c.broken("participants") {
+		c.fail("max_age_years is below min_age_years", "participants", "max_age_years")
 	}
+	for i := range p.Screening {
+		c.sentences(p.Screening[i].Ask, "participants", "screening", p.Screening[i].Name, "ask")
+	}
+}
+
+func (c *checker) has(key string) bool {
+	_, ok := c.root.Get(key)
+	return ok
 }
 
 // Statements are the list items of a consent text: what participants tick.
@@ -104,63 +144,123 @@ func Statements(markdown string) []string {
 }
 
 func (c *checker) screen() {
+	if c.broken("screen") {
+		return
+	}
 	s := c.s.Screen
 	if s.MaxRefreshHz > 0 && s.MaxRefreshHz < s.MinRefreshHz {
-		c.report(false, "max_refresh_hz is below min_refresh_hz", "screen", "max_refresh_hz")
+		c.fail("max_refresh_hz is below min_refresh_hz", "screen", "max_refresh_hz")
 	}
 	if s.MinDistanceMm >= s.MaxDistanceMm {
-		c.report(false, "min_distance_mm must be below max_distance_mm", "screen", "min_distance_mm")
+		c.fail("min_distance_mm must be below max_distance_mm", "screen", "min_distance_mm")
 	}
 	if s.Distance == StatedDistance && (s.StatedDistanceMm < s.MinDistanceMm || s.StatedDistanceMm > s.MaxDistanceMm) {
-		c.report(false, "the stated distance is outside min_distance_mm to max_distance_mm", "screen", "stated_distance_mm")
+		c.fail("the stated distance is outside min_distance_mm to max_distance_mm", "screen", "stated_distance_mm")
 	}
 }
 
-func (c *checker) display(d *DisplaySpec) {
-	if d.Kind.Check != nil {
-		d.Kind.Check(d.Values, func(key, message string) { c.report(false, message, "displays", d.Name, key) })
+func (c *checker) displays() {
+	used := make([]bool, len(c.s.Displays))
+	for i := range c.s.Tasks {
+		if d := c.s.Tasks[i].Display; d >= 0 && d < len(used) {
+			used[d] = true
+		}
 	}
-	if d.Kind.Extent == nil {
+	for i := range c.s.Displays {
+		d := &c.s.Displays[i]
+		if c.broken("displays."+d.Name) || d.Kind == nil {
+			continue
+		}
+		c.possible(d, d.Values, func(key, message string) {
+			if key == "" {
+				c.fail(message, "displays", d.Name)
+				return
+			}
+			c.fail(message, "displays", d.Name, key)
+		})
+		if !used[i] && !c.broken("tasks") {
+			c.warn("no task shows this display", "displays", d.Name)
+		}
+	}
+}
+
+// possible reports what the display cannot show of values, or the screen not
+// hold; key is "" where it is about the display as a whole.
+func (c *checker) possible(d *DisplaySpec, values display.Values, problem func(key, message string)) {
+	if d.Kind.Check != nil {
+		d.Kind.Check(values, problem)
+	}
+	if d.Kind.Extent == nil || c.broken("screen") {
 		return
 	}
-	width, height := d.Kind.Extent(d.Values)
+	width, height := d.Kind.Extent(values)
 	if w := width + float64(2*math.Abs(d.XDeg)); w > c.s.Screen.MinWidthDeg+1e-9 {
-		c.report(false, "display "+d.Name+" is "+formatNumber(w)+" deg wide about fixation, but the screen only has to manage "+
-			formatNumber(c.s.Screen.MinWidthDeg)+": raise screen.min_width_deg", "displays", d.Name)
+		problem("", "display "+d.Name+" is "+formatNumber(w)+" deg wide about fixation, but the screen only has to manage "+
+			formatNumber(c.s.Screen.MinWidthDeg)+": raise screen.min_width_deg")
 	}
 	if h := height + float64(2*math.Abs(d.YDeg)); h > c.s.Screen.MinHeightDeg+1e-9 {
-		c.report(false, "display "+d.Name+" is "+formatNumber(h)+" deg high about fixation, but the screen only has to manage "+
-			formatNumber(c.s.Screen.MinHeightDeg)+": raise screen.min_height_deg", "displays", d.Name)
+		problem("", "display "+d.Name+" is "+formatNumber(h)+" deg high about fixation, but the screen only has to manage "+
+			formatNumber(c.s.Screen.MinHeightDeg)+": raise screen.min_height_deg")
+	}
+}
+
+func (c *checker) tasks() {
+	used := make([]bool, len(c.s.Tasks))
+	for i := range c.s.Blocks {
+		if t := c.s.Blocks[i].Task; t >= 0 && t < len(used) {
+			used[t] = true
+		}
+	}
+	for i := range c.s.Tasks {
+		t := &c.s.Tasks[i]
+		if !c.broken("tasks." + t.Name) {
+			c.task(t)
+		}
+		if !used[i] && !c.broken("blocks") {
+			c.warn("no block uses this task", "tasks", t.Name)
+		}
 	}
 }
 
 func (c *checker) task(t *Task) {
 	if 2*t.RampMs > t.StimulusMs {
-		c.report(false, "the ramps at onset and offset are longer than the stimulus: at most half of stimulus_ms is possible", "tasks", t.Name, "ramp_ms")
+		c.fail("the ramps at onset and offset are longer than the stimulus: at most half of stimulus_ms is possible", "tasks", t.Name, "ramp_ms")
 	}
 	if t.ResponseWindowMs > 0 && t.ResponseWindowMs < t.StimulusMs && !t.RespondDuring {
-		c.report(false, "the response window ends before the stimulus does, so nobody can answer: make it longer than stimulus_ms or set respond_during", "tasks", t.Name, "response_window_ms")
+		c.fail("the response window ends before the stimulus does, so nobody can answer: make it longer than stimulus_ms or set respond_during", "tasks", t.Name, "response_window_ms")
 	}
 	if len(t.Choices) < 2 {
-		c.report(false, "at least two choices are needed", "tasks", t.Name, "choices")
+		c.fail("at least two choices are needed", "tasks", t.Name, "choices")
 	}
-	keys := map[string]string{"Escape": "stopping a display"}
+	taken := map[string]string{"Escape": "stopping a display"}
 	for i := range t.Choices {
 		ch := &t.Choices[i]
-		for _, k := range ch.Keys {
-			if other, taken := keys[k]; taken {
-				c.report(false, "the key "+k+" is already used for "+other, "tasks", t.Name, "choices", ch.Name, "keys")
+		for j, k := range ch.Keys {
+			if bad := checkKey(k); bad != "" {
+				c.fail(bad, "tasks", t.Name, "choices", ch.Name, "keys", j)
+			} else if other, ok := taken[k]; ok {
+				c.fail("the key "+k+" is already used for "+other, "tasks", t.Name, "choices", ch.Name, "keys", j)
 			}
-			keys[k] = ch.Name
+			taken[k] = ch.Name
 		}
 		c.sentences(ch.Label, "tasks", t.Name, "choices", ch.Name, "label")
 	}
+	c.sentences(t.Prompt, "tasks", t.Name, "prompt")
 }
 
+// sentences checks that a sentence that is given is there in every language.
 func (c *checker) sentences(list []LocalText, keys ...any) {
+	if len(list) == 0 || len(c.s.About.Languages) == 0 || c.broken("about.languages") {
+		return
+	}
 	for _, language := range c.s.About.Languages {
 		if Localised(list, language) == "" {
-			c.report(false, "there is no text in language "+quote(language), keys...)
+			c.fail("there is no text in language "+quote(language), keys...)
+		}
+	}
+	for i := range list {
+		if language := list[i].Language; !contains(c.s.About.Languages, language) {
+			c.fail("language "+quote(language)+" is not among about.languages", append(keys, language)...)
 		}
 	}
 }
@@ -175,162 +275,102 @@ func Localised(list []LocalText, language string) string {
 	return ""
 }
 
-func (c *checker) procedure(p *ProcedureSpec) {
-	for _, problem := range procedure.Check(p.Spec) {
-		c.report(false, problem.Message, "procedures", p.Name, problem.Key)
-	}
-}
-
-func (c *checker) block(i int, b *Block) {
-	d := c.s.displayOf(b.Task)
-	if d == nil {
-		return
-	}
-	task := &c.s.Tasks[b.Task]
-	if b.Procedure >= 0 {
-		c.blockProcedure(i, b, d, task)
-	} else if b.Trials == 0 && b.Practice.MaxTrials == 0 {
-		c.report(false, "give procedure, trials, or (in practice) criterion.max_trials: nothing says how many trials there are", "blocks", i)
-	}
-	if b.Practice.Correct > b.Practice.Window {
-		c.report(false, "more right answers are asked for than the window has trials", "blocks", i, "criterion", "correct")
-	}
-	if b.Practice.Window > b.Practice.MaxTrials && b.Practice.MaxTrials > 0 {
-		c.report(false, "the window is longer than max_trials, so the criterion can never be met", "blocks", i, "criterion", "window")
-	}
-	if b.Catch.Every == 1 {
-		c.report(false, "every: 1 would make all trials catch trials: 2 or more, or 0 for none", "blocks", i, "catch", "every")
-	}
-	if b.Catch.Every > 0 && len(b.Catch.Set) == 0 {
-		c.report(false, "catch trials need values that make them easy, e.g. set: {coherence: 1}", "blocks", i, "catch")
-	}
-	c.reachable(i, b, d, task)
-}
-
-func (c *checker) blockProcedure(i int, b *Block, d *DisplaySpec, task *Task) {
-	p := &c.s.Procedures[b.Procedure]
-	j := d.Kind.Index(p.Parameter)
-	if j < 0 {
-		c.report(false, "procedure "+p.Name+" varies "+quote(p.Parameter)+", which display "+d.Name+" does not have", "blocks", i, "procedure")
-		return
-	}
-	param := &d.Kind.Params[j]
-	if param.Type == display.Choice || param.Type == display.Boolean {
-		c.report(false, "procedure "+p.Name+" varies "+p.Parameter+", which is not a number", "blocks", i, "procedure")
-		return
-	}
-	if p.Min < param.Min || p.Max > param.Max {
-		c.report(false, "procedure "+p.Name+" goes from "+formatNumber(p.Min)+" to "+formatNumber(p.Max)+", but "+
-			p.Parameter+" of display "+d.Name+" can only be "+rangeText(param.Min, param.Max), "blocks", i, "procedure")
-	}
-	if n := len(task.Choices); p.Method == procedure.QuestPlus && n > 0 && math.Abs(p.Guess-1/float64(n)) > 1e-3 {
-		c.report(true, "guess is "+formatNumber(p.Guess)+", but the task has "+formatNumber(float64(n))+
-			" choices: guessing is right in "+formatNumber(1/float64(n)), "procedures", p.Name, "guess")
-	}
-}
-
-// reachable checks that every combination of balanced values has exactly one right answer.
-func (c *checker) reachable(i int, b *Block, d *DisplaySpec, task *Task) {
-	values := d.Values.Clone()
-	apply := func(list []Setting) {
-		for _, s := range list {
-			values[d.Kind.Index(s.Key)] = []float64{s.Value}
+func (c *checker) procedures() {
+	used := make([]bool, len(c.s.Procedures))
+	for i := range c.s.Blocks {
+		if p := c.s.Blocks[i].Procedure; p >= 0 && p < len(used) {
+			used[p] = true
 		}
 	}
-	apply(b.Fixed)
-	conditions := b.Conditions
-	if len(conditions) == 0 {
-		conditions = []Condition{{}}
-	}
-	for _, condition := range conditions {
-		apply(condition.Set)
-		for n := range Crossings(b.Balance) {
-			apply(Crossing(b.Balance, n))
-			right, meant := 0, false
-			for j := range task.Choices {
-				meant = meant || len(task.Choices[j].Correct) > 0
-				if matches(task.Choices[j].Correct, d, values) {
-					right++
-				}
+	for i := range c.s.Procedures {
+		p := &c.s.Procedures[i]
+		if !c.broken("procedures." + p.Name) {
+			for _, problem := range procedure.Check(p.Spec) {
+				c.fail(problem.Message, "procedures", p.Name, problem.Key)
 			}
-			if meant && right != 1 {
-				what := "no choice is the right one"
-				if right > 1 {
-					what = "more than one choice is right"
-				}
-				c.report(false, "for "+describe(Crossing(b.Balance, n), d)+what+": look at right_when of task "+task.Name, "blocks", i)
-				return
+		}
+		if !used[i] && !c.broken("blocks") {
+			c.warn("no block uses this procedure", "procedures", p.Name)
+		}
+	}
+}
+
+func (c *checker) groups() {
+	for i := range c.s.Groups {
+		g := &c.s.Groups[i]
+		for j := range i {
+			if c.s.Groups[j].Name == g.Name {
+				c.fail("two groups have the name "+quote(g.Name), "groups", i, "name")
+				break
+			}
+		}
+		if c.broken("groups") {
+			continue
+		}
+		for k := range c.s.Displays {
+			c.groupDisplay(i, g, k)
+		}
+	}
+}
+
+// groupDisplay checks display k as group i sees it.
+func (c *checker) groupDisplay(i int, g *Group, k int) {
+	d := &c.s.Displays[k]
+	if d.Kind == nil || c.broken("displays."+d.Name) {
+		return
+	}
+	values, changed := d.Values.Clone(), false
+	for j, set := range g.Set {
+		if set.Display != k {
+			continue
+		}
+		values[d.Kind.Index(set.Key)][0] = set.Value
+		changed = true
+		for n := range c.s.Blocks {
+			b := &c.s.Blocks[n]
+			if b.Procedure >= 0 && c.s.displayOf(b.Task) == d && c.s.Procedures[b.Procedure].Parameter == set.Key {
+				c.fail("procedure "+c.s.Procedures[b.Procedure].Name+" chooses "+set.Key+" in block "+b.Name+
+					", so the group's value would not be used", "groups", i, "set", j, "values", set.Key)
 			}
 		}
 	}
-}
-
-func describe(list []Setting, d *DisplaySpec) string {
-	s := ""
-	for _, setting := range list {
-		p := &d.Kind.Params[d.Kind.Index(setting.Key)]
-		text := formatNumber(setting.Value)
-		if p.Type == display.Choice {
-			text = p.Options[int(setting.Value)]
-		}
-		s += setting.Key + " = " + text + " "
+	if changed && c.shows(d) {
+		c.possible(d, values, func(_, message string) { c.fail("for group "+g.Name+": "+message, "groups", i, "set") })
 	}
-	return s
 }
 
-// matches tells whether all settings equal the values; no settings match nothing.
-func matches(list []Setting, d *DisplaySpec, values display.Values) bool {
-	for _, s := range list {
-		if i := d.Kind.Index(s.Key); i < 0 || values.Num(i) != s.Value {
-			return false
+func (c *checker) orders() {
+	measurements := 0
+	for i := range c.s.Blocks {
+		if c.s.Blocks[i].Kind == Measurement {
+			measurements++
 		}
 	}
-	return len(list) > 0
-}
-
-// RightChoice is the index of the right choice for the values, −1 if none is.
-func (t *Task) RightChoice(d *DisplaySpec, values display.Values) int {
-	for i := range t.Choices {
-		if matches(t.Choices[i].Correct, d, values) {
-			return i
-		}
+	if c.s.Orders.Method != AsWritten && measurements == 1 && !c.broken("blocks") {
+		c.warn("there is one measurement block, so there is nothing to order", "orders", "method")
 	}
-	return -1
-}
-
-// Crossings is the number of combinations of balanced values, at least 1.
-func Crossings(list []Balanced) int {
-	n := 1
-	for i := range list {
-		n *= len(list[i].Values)
-	}
-	return n
-}
-
-// Crossing is combination n of balanced values, the first parameter varying fastest.
-func Crossing(list []Balanced, n int) []Setting {
-	settings := make([]Setting, len(list))
-	for i := range list {
-		k := len(list[i].Values)
-		settings[i] = Setting{Key: list[i].Key, Value: list[i].Values[n%k]}
-		n /= k
-	}
-	return settings
 }
 
 func (c *checker) question(q *Question) {
+	if c.broken("questions." + q.Name) {
+		return
+	}
 	switch q.Type {
 	case ChoiceQuestion:
 		if len(q.Options) < 2 {
-			c.report(false, "a choice needs at least two options", "questions", q.Name)
+			c.fail("a choice needs at least two options", "questions", q.Name)
 		}
 	case NumberQuestion, ScaleQuestion:
 		if q.Min >= q.Max {
-			c.report(false, "min must be below max", "questions", q.Name)
-		}
-		if q.Type == ScaleQuestion && (q.Max-q.Min > 100 || q.Min != math.Floor(q.Min) || q.Max != math.Floor(q.Max)) {
-			c.report(false, "a scale goes from one whole number to another, in at most 100 steps", "questions", q.Name)
+			c.fail("min must be below max", "questions", q.Name, "min")
+		} else if q.Type == ScaleQuestion && (q.Max-q.Min > 100 || q.Min != math.Floor(q.Min) || q.Max != math.Floor(q.Max)) {
+			c.fail("a scale goes from one whole number to another, in at most 100 steps", "questions", q.Name, "max")
 		}
 	}
 	c.sentences(q.Ask, "questions", q.Name, "ask")
+	for i := range q.Options {
+		c.sentences(q.Options[i].Label, "questions", q.Name, "options", q.Options[i].Name, "label")
+	}
+	c.sentences(q.LowEnd, "questions", q.Name, "low_end")
+	c.sentences(q.HighEnd, "questions", q.Name, "high_end")
 }

@@ -15,7 +15,10 @@ type codec struct {
 	mode     mode
 	in       value.Value // reading: the mapping
 	path     string
-	known    []string // keys that the walk asked for
+	keyPos   value.Pos // reading: where the mapping's own key stands
+	key      string    // and what it is
+	known    []string  // keys that the walk asked for
+	missing  []string  // required keys that are not there
 	out      []value.Member
 	problems *Problems
 	schema   *Schema
@@ -36,6 +39,7 @@ type num struct {
 	Default  float64
 	Required bool
 	Whole    bool
+	Beyond   string // message above Max, "" for the usual one
 }
 
 // word describes a text in a study file.
@@ -71,8 +75,7 @@ func (c *codec) take(key string, required bool) (value.Value, bool) {
 		ok = false
 	}
 	if !ok && required {
-		pos := c.in.Pos
-		*c.problems = append(*c.problems, Problem{Pos: pos, Path: c.path, Message: "the key " + key + " is missing"})
+		c.missing = append(c.missing, key)
 	}
 	return v, ok
 }
@@ -108,6 +111,8 @@ func (c *codec) readNumber(key string, v value.Value, x *float64, rule num) {
 		c.problem(key, v, "a number is expected, not "+value.KindNames[v.Kind])
 	case rule.Whole && v.Num != math.Floor(v.Num):
 		c.problem(key, v, "a whole number is expected")
+	case v.Num > rule.Max && rule.Beyond != "":
+		c.problem(key, v, rule.Beyond)
 	case v.Num < rule.Min || v.Num > rule.Max || math.IsNaN(v.Num):
 		c.problem(key, v, formatNumber(v.Num)+" is out of range: it must be "+rangeText(rule.Min, rule.Max))
 	default:
@@ -241,8 +246,8 @@ func (c *codec) index(key string, v value.Value, names []string) int {
 
 func quote(s string) string { return strconv.Quote(s) }
 
-// words walks a list of texts.
-func (c *codec) words(key string, list *[]string, doc string) {
+// words walks a list of texts; what is wrong with one is what bad says, nil if nothing can be.
+func (c *codec) words(key string, list *[]string, bad func(string) string, doc string) {
 	switch c.mode {
 	case writing:
 		items := make([]value.Value, len(*list))
@@ -262,6 +267,12 @@ func (c *codec) words(key string, list *[]string, doc string) {
 			if item.Kind != value.Text {
 				c.problem(key, item, "text is expected, not "+value.KindNames[item.Kind])
 				continue
+			}
+			if bad != nil {
+				if message := bad(item.Str); message != "" {
+					c.problem(key, item, message)
+					continue
+				}
 			}
 			*list = append(*list, item.Str)
 		}
@@ -304,8 +315,18 @@ func (c *codec) items(key string, v value.Value) []value.Value {
 }
 
 // sub opens the mapping v under key for reading.
-func (c *codec) sub(path string, v value.Value) *codec {
-	return &codec{mode: c.mode, in: v, path: path, problems: c.problems, language: c.language}
+func (c *codec) sub(path, key string, keyPos value.Pos, v value.Value) *codec {
+	return &codec{mode: c.mode, in: v, path: path, key: key, keyPos: keyPos, problems: c.problems, language: c.language}
+}
+
+// keyPosOf is the place of key in the mapping that is read.
+func (c *codec) keyPosOf(key string) value.Pos {
+	for i := range c.in.Members {
+		if c.in.Members[i].Key == key {
+			return c.in.Members[i].KeyPos
+		}
+	}
+	return c.in.Pos
 }
 
 // group walks one mapping under key. Absent mappings are walked empty, so that defaults hold.
@@ -324,7 +345,7 @@ func (c *codec) group(key string, required bool, doc string, walk func(*codec)) 
 			c.problem(key, v, "a group of keys is expected, not "+value.KindNames[v.Kind])
 			return
 		}
-		inner := c.sub(c.at(key), v)
+		inner := c.sub(c.at(key), key, c.keyPosOf(key), v)
 		if !ok {
 			if required {
 				return
@@ -338,6 +359,11 @@ func (c *codec) group(key string, required bool, doc string, walk func(*codec)) 
 
 // named walks a mapping from names to things, in the order written.
 func named[T any](c *codec, key string, list *[]T, name func(*T) *string, required bool, doc string, walk func(*codec, *T)) {
+	namedBy(c, key, list, name, checkIdentifier, required, doc, walk)
+}
+
+// namedBy is named with names of another form: bad says what is wrong with one.
+func namedBy[T any](c *codec, key string, list *[]T, name func(*T) *string, bad func(string) string, required bool, doc string, walk func(*codec, *T)) {
 	switch c.mode {
 	case writing:
 		members := make([]value.Member, len(*list))
@@ -358,7 +384,7 @@ func named[T any](c *codec, key string, list *[]T, name func(*T) *string, requir
 		walk(&codec{mode: describing, schema: c.schema.named(key, required, doc)}, &t)
 	case reading:
 		v, ok := c.take(key, required)
-		order := c.order(key)
+		members := c.inOrder(key, v.Members)
 		if !ok {
 			return
 		}
@@ -366,15 +392,15 @@ func named[T any](c *codec, key string, list *[]T, name func(*T) *string, requir
 			c.problem(key, v, "names with a group of keys each are expected, not "+value.KindNames[v.Kind])
 			return
 		}
-		for _, m := range inOrder(v.Members, order) {
+		for _, m := range members {
 			var t T
 			*name(&t) = m.Key
-			if bad := checkIdentifier(m.Key); bad != "" {
-				c.problem(key, value.Value{Pos: m.KeyPos, Raw: m.Key}, bad)
+			if message := bad(m.Key); message != "" {
+				c.problem(key+"."+m.Key, value.Value{Pos: m.KeyPos, Raw: m.Key}, message)
 			}
-			inner := c.sub(c.at(key)+"."+m.Key, m.Value)
+			inner := c.sub(c.at(key)+"."+m.Key, m.Key, m.KeyPos, m.Value)
 			if m.Value.Kind != value.Mapping {
-				c.problem(key, m.Value, "a group of keys is expected for "+m.Key+", not "+value.KindNames[m.Value.Kind])
+				c.problem(key+"."+m.Key, m.Value, "a group of keys is expected for "+m.Key+", not "+value.KindNames[m.Value.Kind])
 				continue
 			}
 			walk(inner, &t)
@@ -384,31 +410,35 @@ func named[T any](c *codec, key string, list *[]T, name func(*T) *string, requir
 	}
 }
 
-// order reads the order of a canonical mapping.
-func (c *codec) order(key string) []string {
-	var order []string
-	c.known = append(c.known, key+"_order")
-	if v, ok := c.in.Get(key + "_order"); ok {
-		for _, item := range v.Items {
-			order = append(order, item.Str)
-		}
-	}
-	return order
-}
-
-func inOrder(members []value.Member, order []string) []value.Member {
-	if len(order) != len(members) {
+// inOrder gives the members in the order that a canonical mapping has beside
+// it, since canonical members are sorted, or else as they are written.
+func (c *codec) inOrder(key string, members []value.Member) []value.Member {
+	order, ok := c.take(key+"_order", false)
+	if !ok {
 		return members
 	}
 	sorted := make([]value.Member, 0, len(members))
-	for _, key := range order {
+	for _, item := range order.Items {
 		for i := range members {
-			if members[i].Key == key {
+			if members[i].Key == item.Str && len(sorted) < len(members) {
 				sorted = append(sorted, members[i])
+				break
 			}
 		}
 	}
-	if len(sorted) != len(members) {
+	for i := range sorted {
+		for j := range i {
+			if sorted[i].Key == sorted[j].Key {
+				sorted = nil
+				break
+			}
+		}
+		if sorted == nil {
+			break
+		}
+	}
+	if len(sorted) != len(members) || len(order.Items) != len(members) {
+		c.problem(key+"_order", order, "it must name everything under "+key+" once; in a study file leave it out, the order is that of the text")
 		return members
 	}
 	return sorted
@@ -444,7 +474,7 @@ func listed[T any](c *codec, key string, list *[]T, required bool, doc string, w
 				continue
 			}
 			var t T
-			inner := c.sub(path, item)
+			inner := c.sub(path, "", item.Pos, item)
 			walk(inner, &t)
 			inner.finish()
 			*list = append(*list, t)
@@ -485,25 +515,38 @@ func (c *codec) sentence(key string, list *[]LocalText, required bool, doc strin
 	}
 }
 
-// finish reports the keys that nobody asked for.
+// finish reports the keys that nobody asked for and those that are missing.
+// A missing key that an unknown one was meant to be is one problem, not two.
 func (c *codec) finish() {
 	if c.mode != reading {
 		return
 	}
+	var meant []string
 	for _, m := range c.in.Members {
 		if contains(c.known, m.Key) {
 			continue
 		}
-		message := wrongUnit(m.Key, c.known, m.Value.Num, m.Value.Kind == value.Numeric)
+		message, key := wrongUnit(m.Key, c.known, m.Value.Num, m.Value.Kind == value.Numeric)
 		if message == "" {
 			message = "this key is not known here"
-			if near := nearest(m.Key, c.visible()); near != "" {
-				message += ": did you mean " + near + "?"
+			if key = nearest(m.Key, c.visible()); key != "" {
+				message += ": did you mean " + key + "?"
 			} else {
 				message += ": it can be " + strings.Join(c.visible(), ", ")
 			}
 		}
+		meant = append(meant, key)
 		*c.problems = append(*c.problems, Problem{Pos: m.KeyPos, Path: c.at(m.Key), Offending: m.Key, Message: message})
+	}
+	for _, key := range c.missing {
+		if contains(meant, key) {
+			continue
+		}
+		p := Problem{Pos: c.keyPos, Path: c.path, Offending: c.key, Message: "the key " + key + " is missing"}
+		if p.Pos.Line == 0 {
+			p.Pos = c.in.Pos
+		}
+		*c.problems = append(*c.problems, p)
 	}
 }
 

@@ -1,6 +1,7 @@
 package study
 
 import (
+	"slices"
 	"strconv"
 	"strings"
 
@@ -37,6 +38,28 @@ func (p Problem) String() string {
 
 // Problems are all problems of one study, in the order of the text.
 type Problems []Problem
+
+// InOrder gives the problems in the order of the text, each once.
+func (p Problems) InOrder() Problems {
+	sorted := slices.Clone(p)
+	slices.SortStableFunc(sorted, func(a, b Problem) int {
+		if a.Pos.Line != b.Pos.Line {
+			return a.Pos.Line - b.Pos.Line
+		}
+		return a.Pos.Column - b.Pos.Column
+	})
+	var out Problems
+	from := 0 // first one of the same place
+	for _, problem := range sorted {
+		if from < len(out) && out[from].Pos != problem.Pos {
+			from = len(out)
+		}
+		if !slices.Contains(out[from:], problem) {
+			out = append(out, problem)
+		}
+	}
+	return out
+}
 
 // Failed tells whether any problem is more than a warning.
 func (p Problems) Failed() bool {

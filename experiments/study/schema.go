@@ -88,8 +88,15 @@ func (s *Schema) sentence(key string, required bool, doc string) {
 	)})
 }
 
-func (s *Schema) settings(key string, doc string) {
-	s.add(key, false, doc, text("type", "object"))
+// settings describes parameter values, or with many a list of them for each.
+func (s *Schema) settings(key string, many bool, doc string) {
+	one := value.Member{Key: "type", Value: value.List(value.String("number"), value.String("string"), value.String("boolean"))}
+	each := value.Object(one)
+	if many {
+		each = value.Object(value.Member{Key: "anyOf", Value: value.List(each,
+			value.Object(text("type", "array"), value.Member{Key: "minItems", Value: value.Number(1)}, value.Member{Key: "items", Value: each}))})
+	}
+	s.add(key, false, doc, text("type", "object"), value.Member{Key: "additionalProperties", Value: each})
 }
 
 func (s *Schema) open(key string, required bool, doc string, wrap func(value.Value) value.Value) *Schema {

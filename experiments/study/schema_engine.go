@@ -11,7 +11,7 @@ func (*Schema) flag(string, bool, string)             {}
 func (*Schema) choice(string, []string, bool, string) {}
 func (*Schema) list(string, string, bool, string)     {}
 func (*Schema) sentence(string, bool, string)         {}
-func (*Schema) settings(string, string)               {}
+func (*Schema) settings(string, bool, string)         {}
 func (*Schema) group(string, bool, string) *Schema    { return nil }
 func (*Schema) named(string, bool, string) *Schema    { return nil }
 func (*Schema) listed(string, bool, string) *Schema   { return nil }

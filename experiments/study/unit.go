@@ -31,8 +31,9 @@ func unitOf(key string) (stem string, u unit, ok bool) {
 	return key, unit{}, false
 }
 
-// wrongUnit explains an unknown key that is a known one with another unit, "" if it is not.
-func wrongUnit(key string, known []string, number float64, isNumber bool) string {
+// wrongUnit explains an unknown key that is a known one with another unit, and
+// says which, "" if it is not.
+func wrongUnit(key string, known []string, number float64, isNumber bool) (message, meant string) {
 	stem, given, ok := unitOf(key)
 	if !ok {
 		stem = key
@@ -42,16 +43,16 @@ func wrongUnit(key string, known []string, number float64, isNumber bool) string
 		if !has || knownStem != stem || k == key {
 			continue
 		}
-		message := "wrong unit: it is given as " + k
+		message = "wrong unit: it is given as " + k
 		if !ok {
 			message = "the unit belongs in the key: " + k
 		} else if given.dimension == wanted.dimension && isNumber {
 			message += "; " + formatNumber(number) + strings.ReplaceAll(given.suffix, "_", " ") +
 				" is " + k + ": " + formatNumber(number*given.size/wanted.size)
 		}
-		return message
+		return message, k
 	}
-	return ""
+	return "", ""
 }
 
 // quantityText splits "5 deg/s" into number and unit.

@@ -2,6 +2,7 @@ package study
 
 import (
 	"math"
+	"strconv"
 	"strings"
 
 	"distal/experiments/display"
@@ -21,10 +22,8 @@ func Decode(v value.Value) (*Study, Problems) {
 	c := &codec{mode: reading, in: v, problems: &problems, language: firstLanguage(v)}
 	walkStudy(c, s)
 	c.finish()
-	if !problems.Failed() {
-		check(s, v, &problems)
-	}
-	return s, problems
+	check(s, v, &problems)
+	return s, problems.InOrder()
 }
 
 // Encode gives the canonical tree of s, with every default explicit.
@@ -52,10 +51,12 @@ func firstLanguage(v value.Value) string {
 var inf = math.Inf(1)
 
 func walkStudy(c *codec, s *Study) {
-	c.whole("distal", &s.Format, num{Min: 1, Max: FormatVersion, Required: true}, "version of the study file's format: 1")
+	c.whole("distal", &s.Format, num{Min: 1, Max: FormatVersion, Required: true,
+		Beyond: "this is a format that a later version of the program reads; this one reads format " + strconv.Itoa(FormatVersion)},
+		"version of the study file's format: 1")
 	c.group("about", true, "what the study is and who answers for it", func(c *codec) { walkAbout(c, &s.About) })
 	c.group("participants", false, "who may take part", func(c *codec) { walkParticipants(c, &s.Participants) })
-	named(c, "texts", &s.Texts, func(t *TextSet) *string { return &t.Language }, true,
+	namedBy(c, "texts", &s.Texts, func(t *TextSet) *string { return &t.Language }, checkLanguage, true,
 		"the Markdown texts of each language; in a study file give folder and version instead", walkTexts)
 	c.group("screen", false, "what the participant's screen must manage", func(c *codec) { walkScreen(c, &s.Screen) })
 	named(c, "displays", &s.Displays, func(d *DisplaySpec) *string { return &d.Name }, true, "the displays by name", walkDisplay)
@@ -92,7 +93,7 @@ func walkAbout(c *codec, a *About) {
 	c.text("contact", &a.Contact, word{Required: true}, "e-mail address or telephone number")
 	c.text("institution", &a.Institution, word{}, "")
 	c.text("ethics_id", &a.EthicsID, word{}, "reference of the responsible ethics board")
-	c.words("languages", &a.Languages, "BCP 47 codes; the first is the default")
+	c.words("languages", &a.Languages, checkLanguage, "BCP 47 codes; the first is the default")
 	if c.mode == reading && len(a.Languages) == 0 {
 		a.Languages = []string{"en"}
 	}
@@ -102,6 +103,28 @@ func walkAbout(c *codec, a *About) {
 	c.text("flash_approval", &a.FlashApproval, word{MaxLength: 2000},
 		"name and justification where frames exceed the flash thresholds of WCAG 2.3.1")
 }
+
+// checkLanguage accepts the shape of BCP 47 tags (RFC 5646): a language of two
+// or three letters and further parts after hyphens.
+func checkLanguage(s string) string {
+	parts := strings.Split(s, "-")
+	for i, part := range parts {
+		for j := 0; j < len(part); j++ {
+			c := part[j]
+			letter := c >= 'a' && c <= 'z' || i > 0 && c >= 'A' && c <= 'Z'
+			if !letter && (i == 0 || c < '0' || c > '9') {
+				return quote(s) + " is not a language: write a code such as en, de or pt-BR"
+			}
+		}
+		if n := len(part); n < 2 || n > 8 || i == 0 && n > 3 {
+			return quote(s) + " is not a language: write a code such as en, de or pt-BR"
+		}
+	}
+	return ""
+}
+
+// ValidLanguage tells whether s has the shape of a language code.
+func ValidLanguage(s string) bool { return checkLanguage(s) == "" }
 
 func walkParticipants(c *codec, p *Participants) {
 	c.whole("min_age_years", &p.MinAgeYears, num{Min: 0, Max: 120, Default: 18}, "youngest age")
@@ -161,6 +184,7 @@ func walkDisplay(c *codec, d *DisplaySpec) {
 	}
 	v, ok := c.take("kind", true)
 	if !ok {
+		c.knowAll()
 		return
 	}
 	var names []string
@@ -169,10 +193,7 @@ func walkDisplay(c *codec, d *DisplaySpec) {
 	}
 	i := c.index("kind", v, names)
 	if i < 0 {
-		c.known = nil // without a kind every other key would be reported too
-		for _, m := range c.in.Members {
-			c.known = append(c.known, m.Key)
-		}
+		c.knowAll()
 		return
 	}
 	d.Kind = display.Kinds()[i]
@@ -186,6 +207,13 @@ func walkDisplay(c *codec, d *DisplaySpec) {
 		} else if d.Values[j] == nil {
 			d.Values[j] = []float64{0}
 		}
+	}
+}
+
+// knowAll keeps other keys from being reported where the kind is not known.
+func (c *codec) knowAll() {
+	for _, m := range c.in.Members {
+		c.known = append(c.known, m.Key)
 	}
 }
 
@@ -240,6 +268,13 @@ func encodeParam(p *display.Param, x []float64) value.Value {
 	return value.Number(x[0])
 }
 
+// single is p as a setting gives it: one value, the first of a list.
+func single(p *display.Param) *display.Param {
+	one := *p
+	one.MaxCount = 1
+	return &one
+}
+
 // settings walks parameter values of display d (nil: unknown, all keys are refused).
 func (c *codec) settings(key string, list *[]Setting, d *DisplaySpec, doc string) {
 	switch c.mode {
@@ -247,11 +282,11 @@ func (c *codec) settings(key string, list *[]Setting, d *DisplaySpec, doc string
 		var members []value.Member
 		for _, s := range *list {
 			p := &d.Kind.Params[d.Kind.Index(s.Key)]
-			members = append(members, value.Member{Key: s.Key, Value: encodeParam(p, []float64{s.Value})})
+			members = append(members, value.Member{Key: s.Key, Value: encodeParam(single(p), []float64{s.Value})})
 		}
 		c.put(key, value.Object(members...))
 	case describing:
-		c.schema.settings(key, doc)
+		c.schema.settings(key, false, doc)
 	case reading:
 		v, ok := c.take(key, false)
 		if !ok || d == nil {
@@ -263,7 +298,7 @@ func (c *codec) settings(key string, list *[]Setting, d *DisplaySpec, doc string
 		}
 		for _, m := range v.Members {
 			if p := c.paramOf(key, m.Key, m.KeyPos, m.Value, d); p != nil {
-				if x, ok := c.param(p, key+"."+m.Key, m.Value); ok {
+				if x, ok := c.param(single(p), key+"."+m.Key, m.Value); ok {
 					*list = append(*list, Setting{Key: m.Key, Value: x[0]})
 				}
 			}
@@ -283,14 +318,14 @@ func (c *codec) paramOf(key, name string, pos value.Pos, v value.Value, d *Displ
 	for i := range d.Kind.Params {
 		known = append(known, d.Kind.Params[i].Key)
 	}
-	message := wrongUnit(name, known, v.Num, v.Kind == value.Numeric)
+	message, _ := wrongUnit(name, known, v.Num, v.Kind == value.Numeric)
 	if message == "" {
 		message = "display " + d.Name + " has no parameter " + quote(name)
 		if near := nearest(name, known); near != "" {
 			message += ": did you mean " + near + "?"
 		}
 	}
-	c.problem(key, value.Value{Pos: pos, Raw: name}, message)
+	c.problem(key+"."+name, value.Value{Pos: pos, Raw: name}, message)
 	return nil
 }
 
@@ -361,7 +396,7 @@ func walkTask(c *codec, t *Task, s *Study) {
 	}
 	named(c, "choices", &t.Choices, func(ch *Choice) *string { return &ch.Name }, true, "the response alternatives",
 		func(c *codec, ch *Choice) {
-			c.words("keys", &ch.Keys, "KeyboardEvent code values, e.g. ArrowLeft, KeyF, Space")
+			c.words("keys", &ch.Keys, nil, "KeyboardEvent code values, e.g. ArrowLeft, KeyF, Space")
 			c.sentence("label", &ch.Label, true, "what the button says")
 			c.settings("right_when", &ch.Correct, d, "display parameter values for which this is the right answer")
 		})
@@ -457,14 +492,14 @@ func walkBalance(c *codec, b *Block, d *DisplaySpec) {
 	const key, doc = "balance", "parameters with the values that they take equally often, fully crossed"
 	switch c.mode {
 	case describing:
-		c.schema.settings(key, doc)
+		c.schema.settings(key, true, doc)
 	case writing:
 		var members []value.Member
 		for _, balanced := range b.Balance {
 			p := &d.Kind.Params[d.Kind.Index(balanced.Key)]
 			items := make([]value.Value, len(balanced.Values))
 			for i, x := range balanced.Values {
-				items[i] = encodeParam(&display.Param{Type: p.Type, Options: p.Options}, []float64{x})
+				items[i] = encodeParam(single(p), []float64{x})
 			}
 			members = append(members, value.Member{Key: balanced.Key, Value: value.List(items...)})
 		}
@@ -485,9 +520,13 @@ func walkBalance(c *codec, b *Block, d *DisplaySpec) {
 			}
 			balanced := Balanced{Key: m.Key}
 			for _, item := range c.items(key+"."+m.Key, m.Value) {
-				if x, ok := c.param(p, key+"."+m.Key, item); ok {
+				if x, ok := c.param(single(p), key+"."+m.Key, item); ok {
 					balanced.Values = append(balanced.Values, x[0])
 				}
+			}
+			if len(balanced.Values) == 0 {
+				c.problem(key+"."+m.Key, m.Value, "a list of values is expected, e.g. [0, 180]")
+				continue
 			}
 			b.Balance = append(b.Balance, balanced)
 		}
@@ -511,11 +550,11 @@ func walkGroup(c *codec, g *Group, s *Study) {
 		if c.mode != reading {
 			return
 		}
-		if len(list) != 1 {
-			c.problem("values", c.in, "exactly one parameter is expected: use one entry for each")
-			return
+		if given, _ := c.in.Get("values"); len(given.Members) != 1 {
+			c.problem("values", value.Value{Pos: c.keyPosOf("values"), Raw: "values"}, "exactly one parameter is expected: use one entry for each")
+		} else if len(list) == 1 {
+			set.Setting = list[0]
 		}
-		set.Setting = list[0]
 	})
 }
 

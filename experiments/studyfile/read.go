@@ -11,6 +11,7 @@ import (
 	"path"
 	"strconv"
 	"strings"
+	"unicode/utf8"
 
 	"github.com/goccy/go-yaml/ast"
 	"github.com/goccy/go-yaml/parser"
@@ -33,14 +34,14 @@ func Read(fsys fs.FS, name string) (*study.Study, study.Problems) {
 	if err != nil {
 		return nil, study.Problems{{Pos: value.Pos{File: name}, Message: err.Error()}}
 	}
-	tree, problem := Parse(text)
-	if problem != nil {
-		problem.Pos.File = name
-		return nil, study.Problems{*problem}
+	tree, problems := Parse(text)
+	var s *study.Study
+	if !problems.Failed() {
+		tree, problems = withTexts(fsys, path.Dir(name), tree)
+		var more study.Problems
+		s, more = study.Decode(tree)
+		problems = append(problems, more...).InOrder()
 	}
-	tree, problems := withTexts(fsys, path.Dir(name), tree)
-	s, more := study.Decode(tree)
-	problems = append(problems, more...)
 	for i := range problems {
 		problems[i].Pos.File = name
 	}
@@ -58,30 +59,37 @@ func readLimited(fsys fs.FS, name string, limit int64) ([]byte, error) {
 	if info.IsDir() || info.Size() > limit {
 		return nil, fmt.Errorf("%s is not a file of at most %d bytes", name, limit)
 	}
-	return fs.ReadFile(fsys, name)
+	text, err := fs.ReadFile(fsys, name)
+	if err == nil && !utf8.Valid(text) {
+		return nil, fmt.Errorf("%s is not written in UTF-8: save it in that encoding", name)
+	}
+	return text, err
 }
 
 // Parse reads YAML into a value tree. Aliases, tags, merge keys, several
-// documents and keys that are not plain words are refused.
-func Parse(text []byte) (value.Value, *study.Problem) {
+// documents, keys that stand twice and keys that are not plain words are
+// refused, all of them at once.
+func Parse(text []byte) (value.Value, study.Problems) {
 	file, err := parse(text)
 	if err != nil {
-		return value.Value{}, syntaxProblem(err)
+		return value.Value{}, study.Problems{syntaxProblem(err)}
 	}
+	var c converter
 	var body ast.Node
 	for _, doc := range file.Docs {
-		if doc.Body == nil {
-			continue
+		switch {
+		case doc.Body == nil:
+		case body == nil:
+			body = doc.Body
+		default:
+			c.problem(doc.Body, "a study file is one YAML document: take out the line ---")
 		}
-		if body != nil {
-			return value.Value{}, problemAt(doc.Body, "a study file is one YAML document")
-		}
-		body = doc.Body
 	}
 	if body == nil {
-		return value.Value{}, &study.Problem{Pos: value.Pos{Line: 1, Column: 1}, Message: "the study file is empty"}
+		return value.Value{}, study.Problems{{Pos: value.Pos{Line: 1, Column: 1}, Message: "the study file is empty"}}
 	}
-	return convert(body, 0)
+	v := c.convert(body, 0)
+	return v, c.problems.InOrder()
 }
 
 // parse guards against panics of the parser on hostile input.
@@ -91,11 +99,11 @@ func parse(text []byte) (file *ast.File, err error) {
 			err = fmt.Errorf("the YAML cannot be read: %v", r)
 		}
 	}()
-	return parser.ParseBytes(text, 0)
+	return parser.ParseBytes(text, 0, parser.AllowDuplicateMapKey())
 }
 
-func syntaxProblem(err error) *study.Problem {
-	p := &study.Problem{Pos: value.Pos{Line: 1, Column: 1}, Message: firstLine(err.Error())}
+func syntaxProblem(err error) study.Problem {
+	p := study.Problem{Pos: value.Pos{Line: 1, Column: 1}, Message: firstLine(err.Error())}
 	var located interface{ GetToken() *token.Token }
 	if errors.As(err, &located) {
 		if t := located.GetToken(); t != nil && t.Position != nil {
@@ -107,6 +115,12 @@ func syntaxProblem(err error) *study.Problem {
 	if errors.As(err, &message) {
 		p.Message = message.GetMessage()
 	}
+	switch {
+	case strings.Contains(p.Message, "'\t'"):
+		p.Message = "indent with spaces, not with a tabulator"
+	case strings.Contains(p.Message, "is not allowed in this context"):
+		p.Message += ": look at the indentation of this line and of the one before"
+	}
 	return p
 }
 
@@ -115,119 +129,130 @@ func firstLine(s string) string {
 	return line
 }
 
+// position is where n begins: a group of keys begins with its first key.
 func position(n ast.Node) value.Pos {
+	switch n := n.(type) {
+	case *ast.MappingNode:
+		if !n.IsFlowStyle && len(n.Values) > 0 {
+			return position(n.Values[0].Key)
+		}
+	case *ast.MappingValueNode:
+		return position(n.Key)
+	}
 	if t := n.GetToken(); t != nil && t.Position != nil {
 		return value.Pos{Line: t.Position.Line, Column: t.Position.Column}
 	}
 	return value.Pos{}
 }
 
-func problemAt(n ast.Node, message string) *study.Problem {
-	p := &study.Problem{Pos: position(n), Message: message}
+// converter makes value trees of YAML and collects what is refused.
+type converter struct{ problems study.Problems }
+
+func (c *converter) problem(n ast.Node, message string) {
+	p := study.Problem{Pos: position(n), Message: message}
 	if t := n.GetToken(); t != nil {
 		p.Offending = t.Value
 	}
-	return p
+	c.problems = append(c.problems, p)
 }
 
 const maxDepth = 40
 
-func convert(n ast.Node, depth int) (value.Value, *study.Problem) {
+func (c *converter) convert(n ast.Node, depth int) value.Value {
 	if depth > maxDepth {
-		return value.Value{}, problemAt(n, "nested too deeply")
+		c.problem(n, "nested too deeply")
+		return value.Value{}
 	}
-	v, problem := convertNode(n, depth)
-	if v.Pos.Line == 0 {
-		v.Pos = position(n)
-	}
-	return v, problem
+	v := c.node(n, depth)
+	v.Pos = position(n)
+	return v
 }
 
-func convertNode(n ast.Node, depth int) (value.Value, *study.Problem) {
+func (c *converter) node(n ast.Node, depth int) value.Value {
 	switch n := n.(type) {
 	case *ast.NullNode:
-		return value.Value{}, nil
 	case *ast.BoolNode:
 		v := value.Bool(n.Value)
 		v.Raw = n.Token.Value
-		return v, nil
+		return v
 	case *ast.IntegerNode:
-		return numeric(n, n.Token.Value)
+		return c.number(n, n.Token.Value)
 	case *ast.FloatNode:
-		return numeric(n, n.Token.Value)
+		return c.number(n, n.Token.Value)
 	case *ast.InfinityNode, *ast.NanNode:
-		return value.Value{}, problemAt(n, "a finite number is needed")
+		c.problem(n, "a finite number is needed")
 	case *ast.StringNode:
 		v := value.String(n.Value)
 		v.Raw = n.Token.Value
-		return v, nil
+		return v
 	case *ast.LiteralNode:
 		v := value.String(n.Value.Value)
 		v.Raw = firstLine(n.Value.Value)
-		return v, nil
+		return v
 	case *ast.SequenceNode:
 		v := value.List()
-		v.Pos = position(n)
 		for _, item := range n.Values {
-			converted, problem := convert(item, depth+1)
-			if problem != nil {
-				return v, problem
-			}
-			v.Items = append(v.Items, converted)
+			v.Items = append(v.Items, c.convert(item, depth+1))
 		}
-		return v, nil
+		return v
 	case *ast.MappingNode:
-		return mapping(n, n.Values, depth)
+		return c.mapping(n.Values, depth)
 	case *ast.MappingValueNode:
-		return mapping(n, []*ast.MappingValueNode{n}, depth)
+		return c.mapping([]*ast.MappingValueNode{n}, depth)
 	case *ast.AnchorNode, *ast.AliasNode:
-		return value.Value{}, problemAt(n, "anchors and aliases are not used in study files: write the value again")
+		c.problem(n, "anchors and aliases are not used in study files: write the value again")
 	case *ast.TagNode:
-		return value.Value{}, problemAt(n, "tags (!) are not used in study files")
+		c.problem(n, "tags (!) are not used in study files")
+	default:
+		c.problem(n, "this kind of YAML is not used in study files")
 	}
-	return value.Value{}, problemAt(n, "this kind of YAML is not used in study files")
+	return value.Value{}
 }
 
-func numeric(n ast.Node, text string) (value.Value, *study.Problem) {
+func (c *converter) number(n ast.Node, text string) value.Value {
 	clean := strings.ReplaceAll(text, "_", "")
 	x, err := strconv.ParseFloat(clean, 64)
 	if err != nil {
 		whole, errWhole := strconv.ParseInt(clean, 0, 64)
 		if errWhole != nil {
-			return value.Value{}, problemAt(n, "this number cannot be read")
+			c.problem(n, "this number cannot be read")
+			return value.Value{}
 		}
 		x = float64(whole)
 	}
 	if math.IsInf(x, 0) || math.IsNaN(x) {
-		return value.Value{}, problemAt(n, "a finite number is needed")
+		c.problem(n, "a finite number is needed")
 	}
 	v := value.Number(x)
 	v.Raw = text
-	return v, nil
+	return v
 }
 
-func mapping(n ast.Node, list []*ast.MappingValueNode, depth int) (value.Value, *study.Problem) {
+func (c *converter) mapping(list []*ast.MappingValueNode, depth int) value.Value {
 	v := value.Object()
-	if len(list) > 0 {
-		v.Pos = position(list[0].Key)
-	}
-	seen := map[string]bool{}
+	first := map[string]int{} // line of each key
 	for _, m := range list {
 		key, ok := keyText(m.Key)
 		if !ok {
-			return v, problemAt(m.Key, "keys are plain words")
+			c.problem(m.Key, badKey(m.Key))
+			continue
 		}
-		if seen[key] {
-			return v, problemAt(m.Key, "the key "+strconv.Quote(key)+" stands twice")
+		pos := position(m.Key)
+		if line, twice := first[key]; twice {
+			c.problem(m.Key, "the key "+strconv.Quote(key)+" stands twice: first in line "+strconv.Itoa(line))
+			continue
 		}
-		seen[key] = true
-		converted, problem := convert(m.Value, depth+1)
-		if problem != nil {
-			return v, problem
-		}
-		v.Members = append(v.Members, value.Member{Key: key, KeyPos: position(m.Key), Value: converted})
+		first[key] = pos.Line
+		v.Members = append(v.Members, value.Member{Key: key, KeyPos: pos, Value: c.convert(m.Value, depth+1)})
 	}
-	return v, nil
+	return v
+}
+
+func badKey(n ast.MapKeyNode) string {
+	if _, ok := n.(*ast.MergeKeyNode); ok {
+		return "merge keys (<<) are not used in study files: write the values again"
+	}
+	return "keys are plain words"
 }
 
 func keyText(n ast.MapKeyNode) (string, bool) {
@@ -240,73 +265,4 @@ func keyText(n ast.MapKeyNode) (string, bool) {
 		return k.Token.Value, true
 	}
 	return "", false
-}
-
-// textKinds are the files of each language: folder/kind.language.md.
-var textKinds = []string{"information", "consent", "instructions", "debrief"}
-
-// withTexts replaces texts: {folder, version} by the texts themselves.
-func withTexts(fsys fs.FS, dir string, tree value.Value) (value.Value, study.Problems) {
-	var problems study.Problems
-	at := -1
-	for i := range tree.Members {
-		if tree.Members[i].Key == "texts" {
-			at = i
-		}
-	}
-	if at < 0 || tree.Members[at].Value.Kind != value.Mapping {
-		return tree, nil
-	}
-	texts := tree.Members[at].Value
-	folder, version := "texts", ""
-	for _, m := range texts.Members {
-		switch {
-		case m.Key == "folder" && m.Value.Kind == value.Text:
-			folder = m.Value.Str
-		case m.Key == "version" && m.Value.Kind != value.Mapping:
-			version = m.Value.Raw
-			if m.Value.Kind == value.Text {
-				version = m.Value.Str
-			}
-		default:
-			problems = append(problems, study.Problem{Pos: m.KeyPos, Path: "texts." + m.Key, Offending: m.Key,
-				Message: "here only folder and version are given; the texts are Markdown files such as " + folder + "/consent.en.md"})
-		}
-	}
-	sets := value.Object()
-	sets.Pos = texts.Pos
-	for _, language := range languages(tree) {
-		set := value.Object(value.Member{Key: "version", Value: value.String(version)})
-		set.Pos = texts.Pos
-		for _, kind := range textKinds {
-			name := path.Join(dir, folder, kind+"."+language+".md")
-			text, err := readLimited(fsys, name, maxTextBytes)
-			if err != nil {
-				problems = append(problems, study.Problem{Pos: texts.Pos, Path: "texts", Message: err.Error()})
-				continue
-			}
-			set.Members = append(set.Members, value.Member{Key: kind, Value: value.String(string(text))})
-		}
-		sets.Members = append(sets.Members, value.Member{Key: language, KeyPos: texts.Pos, Value: set})
-	}
-	members := append([]value.Member(nil), tree.Members...)
-	members[at].Value = sets
-	tree.Members = members
-	return tree, problems
-}
-
-func languages(tree value.Value) []string {
-	about, _ := tree.Get("about")
-	list, ok := about.Get("languages")
-	if !ok {
-		return []string{"en"}
-	}
-	if list.Kind == value.Text {
-		return []string{list.Str}
-	}
-	var out []string
-	for _, item := range list.Items {
-		out = append(out, item.Str)
-	}
-	return out
 }
