@@ -98,18 +98,27 @@ func startLab(t *testing.T, name string) *lab {
 // browser starts Chromium with software rendering.
 func browser(t *testing.T, width, height int) context.Context {
 	t.Helper()
+	profile, err := os.MkdirTemp("", "distal-chromium-")
+	if err != nil {
+		t.Fatal(err)
+	}
+	t.Cleanup(func() { os.RemoveAll(profile) }) // the browser may still write for a moment: what is left is in the temporary folder
 	options := append(chromedp.DefaultExecAllocatorOptions[:],
 		chromedp.ExecPath("/usr/bin/chromium"), chromedp.NoSandbox, chromedp.WindowSize(width, height),
 		chromedp.Flag("enable-unsafe-swiftshader", true), chromedp.Flag("use-angle", "swiftshader"),
 		chromedp.Flag("disable-quic", true), chromedp.Flag("disable-background-networking", true),
 		chromedp.Flag("disable-component-update", true), chromedp.Flag("disable-sync", true),
 		chromedp.Flag("disable-background-timer-throttling", true), chromedp.Flag("disable-renderer-backgrounding", true),
-		chromedp.UserDataDir(t.TempDir()),
+		chromedp.UserDataDir(profile), chromedp.WSURLReadTimeout(time.Minute),
 	)
 	allocator, cancel := chromedp.NewExecAllocator(context.Background(), options...)
 	t.Cleanup(cancel)
 	ctx, cancel := chromedp.NewContext(allocator)
 	t.Cleanup(cancel)
+	// The browser lives as long as the context of the first call.
+	if err := chromedp.Run(ctx); err != nil {
+		t.Fatal(err)
+	}
 	return ctx
 }
 
@@ -270,9 +279,18 @@ func (p *participant) distance() {
 
 func (p *participant) check() {
 	p.t.Helper()
-	p.see("page-check")
-	p.click("continue")
-	p.see("page-instructions")
+	// A busy machine may be refused: like a person, try again.
+	for attempt := 0; ; attempt++ {
+		p.see("page-check")
+		p.click("continue")
+		p.do(chromedp.Poll(`!!document.querySelector('`+id("page-instructions")+`') || !!document.querySelector('`+id("check-stop")+`')`, nil))
+		if p.where() == "page-instructions" {
+			break
+		}
+		if attempt == 20 {
+			p.t.Fatalf("the display check does not pass: %s", p.text())
+		}
+	}
 	p.picture("instructions")
 	p.click("continue")
 }
@@ -331,6 +349,7 @@ func (p *participant) measure() {
 				p.picture("break")
 			}
 			p.click("continue")
+			p.do(chromedp.Poll(`!document.querySelector('`+id(where)+`')`, nil, chromedp.WithPollingInterval(20*time.Millisecond)))
 		case strings.HasPrefix(where, "trial "):
 			var number int
 			var phase string

@@ -97,9 +97,13 @@ func (p *plot) axes(xLabel, yLabel string) {
 
 func short(v float64) string { return fmt.Sprintf("%.4g", v) }
 
-func (p *plot) svg(description string) templ.Component {
-	return templ.Raw(fmt.Sprintf(`<svg class="plot" viewBox="0 0 %.0f %.0f" width="%.0f" height="%.0f" role="img" aria-label="%s">%s</svg>`,
-		p.width, p.height, p.width, p.height, escape(description), p.b.String()))
+func (p *plot) svg(description string) templ.Component { return p.svgAs("img", description) }
+
+// svgAs gives the drawing a role: a picture hides what is in it from screen
+// readers, a group shows its links.
+func (p *plot) svgAs(role, description string) templ.Component {
+	return templ.Raw(fmt.Sprintf(`<svg class="plot" viewBox="0 0 %.0f %.0f" width="%.0f" height="%.0f" role="%s" aria-label="%s">%s</svg>`,
+		p.width, p.height, p.width, p.height, role, escape(description), p.b.String()))
 }
 
 // withUnit is a name with its unit, as axes carry it.
@@ -155,8 +159,8 @@ func (t ThresholdPlot) Draw() templ.Component {
 	p.printf(`<text class="label" transform="translate(13 %.1f) rotate(-90)" text-anchor="middle">%s</text>`, (p.top+p.height-p.bottom)/2, escape(withUnit(t.Parameter, t.Unit)))
 	if n > 0 {
 		mean := math.Exp(sum / n)
-		p.printf(`<path class="mean" d="M%.1f %.1fH%.1f"/><text class="tick" x="%.1f" y="%.1f" text-anchor="end">geometric mean %s</text>`,
-			p.left, p.y.at(mean), p.width-p.right, p.width-p.right, p.y.at(mean)-5, short(mean))
+		p.printf(`<path class="mean" d="M%.1f %.1fH%.1f"/><text class="tick" x="%.1f" y="%.1f">geometric mean %s</text>`,
+			p.left, p.y.at(mean), p.width-p.right, p.left+6, p.y.at(mean)-5, short(mean))
 	}
 	for k, i := range items {
 		class := "point"
@@ -169,10 +173,10 @@ func (t ThresholdPlot) Draw() templ.Component {
 			kind = "simulated"
 		}
 		x := p.x.at(float64(k + 1))
-		p.printf(`<a href="/runs/%s"><title>%s run, threshold %s</title><path class="bar" d="M%.1f %.1fV%.1f"/><circle class="%s" cx="%.1f" cy="%.1f" r="4"/></a>`,
+		p.printf(`<a href="/runs/%s" aria-label="%s run, threshold %s"><path class="bar" d="M%.1f %.1fV%.1f"/><circle class="%s" cx="%.1f" cy="%.1f" r="4"/></a>`,
 			i.run, kind, short(i.value), x, p.y.at(math.Max(i.low, low*0.5)), p.y.at(math.Min(i.high, high*2)), class, x, p.y.at(i.value))
 	}
-	return p.svg(fmt.Sprintf("Thresholds of %d runs, %s", len(items), t.Name))
+	return p.svgAs("group", fmt.Sprintf("Thresholds of %d runs, %s", len(items), t.Name))
 }
 
 // Trace draws the levels of the trials, right ones filled, wrong ones open.
@@ -299,4 +303,9 @@ func quotaValue(quota string) string {
 		return "0"
 	}
 	return quota
+}
+
+// shareBar draws a share as a bar.
+func shareBar(share float64) templ.Component {
+	return templ.Raw(fmt.Sprintf(`<svg class="share" width="160" height="10" role="img" aria-label="%.0f %%"><rect class="rest" width="160" height="10"/><rect class="fill" width="%.1f" height="10"/></svg>`, 100*share, 160*share))
 }
