@@ -427,8 +427,16 @@ func (w *walker) altered(h *hurdle, address string) {
 	open := func(a *alter) {
 		w.t.Helper()
 		h.altering.Store(a)
-		w.do(network.ClearBrowserCookies(), network.ClearBrowserCache(), chromedp.Navigate("about:blank"),
-			chromedp.Evaluate(`1`, nil), chromedp.Navigate(address))
+		w.do(chromedp.Evaluate(`indexedDB.deleteDatabase("distal")`, nil), network.ClearBrowserCookies(), network.ClearBrowserCache(),
+			chromedp.Navigate("about:blank"), chromedp.Navigate(address))
+	}
+	runs := func() int {
+		w.t.Helper()
+		list, err := w.lab.app.store.FindRuns(context.Background(), w.lab.id, w.lab.study.ID)
+		if err != nil {
+			w.t.Fatal(err)
+		}
+		return len(list)
 	}
 	bundle := "/api/bundles/" + w.lab.study.Bundle
 	open(&alter{bundle, "Which way", "Which Way"})
@@ -436,8 +444,12 @@ func (w *walker) altered(h *hurdle, address string) {
 	open(&alter{bundle, `"signature":"ey`, `"signature":"ez`})
 	w.see("page-not-verified")
 	open(&alter{"/assets/" + assets["engine"].Digest, "asm", "asn"})
+	before := runs()
 	w.consent()
 	w.see("page-not-verified")
+	if after := runs(); after != before {
+		w.t.Errorf("%d runs were begun with an engine that is not the signed one", after-before)
+	}
 	// Without the signed script nothing runs; the style sheet alone tells, after a while.
 	open(&alter{"/assets/" + assets["participant_js"].Digest, "consent", "consemt"})
 	w.do(chromedp.Poll(`getComputedStyle(document.querySelector(".waiting")).visibility === "visible"`, nil))

@@ -30,6 +30,9 @@ function unfit(): "unfit_phone" | "unfit_webgl" | "unfit_browser" | null {
   return null;
 }
 
+/** Whether this device has begun a run of the study: what went wrong is told accordingly. */
+let begun = false;
+
 class Participation {
   private engine!: Engine;
   private outbox!: Outbox;
@@ -68,6 +71,7 @@ class Participation {
 
   /** Takes up a run that this device began. False if there is none any more. */
   private async resume(kept: Session): Promise<boolean> {
+    begun = true;
     let state: RunState;
     try {
       state = asRunState(await call("GET", "/api/run", { token: kept.token }));
@@ -145,6 +149,7 @@ class Participation {
     const content = await this.consentPage();
     if (!content) return false;
     show("storing", say("storing"));
+    await this.code; // nothing is recorded before the engine is here and verified
     const key = creationKey(this.key);
     const consent = this.body("consent", content);
     for (let delay = 500; ; delay = Math.min(8000, delay * 2)) {
@@ -493,7 +498,7 @@ async function main(): Promise<void> {
     if (document.fullscreenElement) await document.exitFullscreen();
     setFooter(null);
     console.error(e);
-    if (e instanceof NotVerified) tell("not-verified", say("not_verified_title"), say("not_verified", { what: e.message }));
+    if (e instanceof NotVerified) tell("not-verified", say("not_verified_title"), say(begun ? "not_verified_later" : "not_verified", { what: e.message }));
     else tell("failed", say("failed_title"), say("failed", { what: e instanceof Error ? e.message : String(e) }));
   }
 }
