@@ -210,7 +210,7 @@ func oneOf[T ~int](c *codec, key string, n *T, names []string, standard T, requi
 			c.put(key, value.String(names[*n]))
 		}
 	case describing:
-		c.schema.choice(key, names, required, doc)
+		c.schema.choice(key, names, int(standard), required, doc)
 	case reading:
 		*n = standard
 		if v, ok := c.take(key, required); ok {
@@ -256,7 +256,7 @@ func (c *codec) words(key string, list *[]string, bad func(string) string, doc s
 		}
 		c.put(key, value.List(items...))
 	case describing:
-		c.schema.list(key, "string", false, doc)
+		c.schema.texts(key, doc)
 	case reading:
 		*list = nil
 		v, ok := c.take(key, false)
@@ -285,7 +285,7 @@ func (c *codec) numbers(key string, list *[]float64, rule num, doc string) {
 	case writing:
 		c.put(key, value.Numbers(*list))
 	case describing:
-		c.schema.list(key, "number", rule.Required, doc)
+		c.schema.numbers(key, rule, doc)
 	case reading:
 		*list = nil
 		v, ok := c.take(key, rule.Required)

@@ -4,7 +4,6 @@ package study
 
 import (
 	"math"
-	"strings"
 
 	"distal/experiments/display"
 	"distal/experiments/value"
@@ -24,6 +23,7 @@ type child struct {
 	schema *Schema
 }
 
+// text is a member with a text.
 func text(key, s string) value.Member { return value.Member{Key: key, Value: value.String(s)} }
 
 func (s *Schema) add(key string, required bool, doc string, members ...value.Member) {
@@ -59,26 +59,47 @@ func (s *Schema) number(key string, rule num, doc string) {
 }
 
 func (s *Schema) text(key string, rule word, doc string) {
-	s.add(key, rule.Required, doc, text("type", "string"))
+	members := []value.Member{text("type", "string")}
+	if rule.Required {
+		members = append(members, value.Member{Key: "minLength", Value: value.Number(1)})
+	} else {
+		members = append(members, text("default", rule.Default))
+	}
+	s.add(key, rule.Required, doc, members...)
 }
 
 func (s *Schema) flag(key string, standard bool, doc string) {
 	s.add(key, false, doc, text("type", "boolean"), value.Member{Key: "default", Value: value.Bool(standard)})
 }
 
-func (s *Schema) choice(key string, names []string, required bool, doc string) {
+func (s *Schema) choice(key string, names []string, standard int, required bool, doc string) {
 	options := make([]value.Value, len(names))
 	for i, n := range names {
 		options[i] = value.String(n)
 	}
-	s.add(key, required, doc, value.Member{Key: "enum", Value: value.List(options...)})
+	members := []value.Member{{Key: "enum", Value: value.List(options...)}}
+	if !required && standard >= 0 && standard < len(options) {
+		members = append(members, value.Member{Key: "default", Value: options[standard]})
+	}
+	s.add(key, required, doc, members...)
 }
 
-func (s *Schema) list(key, kind string, required bool, doc string) {
-	s.add(key, required, doc, value.Member{Key: "anyOf", Value: value.List(
-		value.Object(text("type", kind)),
-		value.Object(text("type", "array"), value.Member{Key: "items", Value: value.Object(text("type", kind))}),
-	)})
+// texts describes a list of texts, or one of them.
+func (s *Schema) texts(key, doc string) {
+	s.oneOrMore(key, false, doc, value.Object(text("type", "string")))
+}
+
+// numbers describes a list of numbers, or one of them.
+func (s *Schema) numbers(key string, rule num, doc string) {
+	item := rule
+	item.Required = true // no default of its own
+	s.oneOrMore(key, rule.Required, doc, value.Object(numberMembers(item)...))
+}
+
+func (s *Schema) oneOrMore(key string, required bool, doc string, item value.Value, more ...value.Member) {
+	s.add(key, required, doc, append([]value.Member{{Key: "anyOf", Value: value.List(item,
+		value.Object(text("type", "array"), value.Member{Key: "items", Value: item}),
+	)}}, more...)...)
 }
 
 func (s *Schema) sentence(key string, required bool, doc string) {
@@ -150,7 +171,7 @@ func JSONSchema() value.Value {
 	v := s.value()
 	for i := range v.Members {
 		if v.Members[i].Key == "properties" {
-			describeDisplays(v.Members[i].Value.Members)
+			describeFile(v.Members[i].Value.Members)
 		}
 	}
 	v.Members = append([]value.Member{
@@ -159,9 +180,21 @@ func JSONSchema() value.Value {
 	return v
 }
 
-// describeDisplays puts one alternative for each kind of display in place of the common keys.
-func describeDisplays(properties []value.Member) {
+// textsSchema is what a study file says of its texts: where they are.
+func textsSchema() value.Value {
+	s := &Schema{doc: "where the Markdown texts are: FOLDER/information.LANGUAGE.md, consent, instructions and debrief, for each language"}
+	s.text("folder", word{Default: "texts"}, "folder beside the study file")
+	s.text("version", word{Required: true}, "version of the consent text, e.g. its date")
+	return s.value()
+}
+
+// describeFile puts what only study files have in place: texts by their folder,
+// and one alternative for each kind of display.
+func describeFile(properties []value.Member) {
 	for i := range properties {
+		if properties[i].Key == "texts" {
+			properties[i].Value = textsSchema()
+		}
 		if properties[i].Key != "displays" {
 			continue
 		}
@@ -170,14 +203,15 @@ func describeDisplays(properties []value.Member) {
 			s := &Schema{doc: k.Doc}
 			c := &codec{mode: describing, schema: s}
 			walkDisplayPlace(c, &DisplaySpec{})
-			s.add("kind", true, k.Doc, value.Member{Key: "const", Value: value.String(k.Name)})
+			s.add("kind", true, "kind of display", value.Member{Key: "const", Value: value.String(k.Name)})
 			for j := range k.Params {
 				describeParam(s, &k.Params[j])
 			}
 			kinds = append(kinds, s.value())
 		}
 		properties[i].Value = value.Object(text("type", "object"),
-			value.Member{Key: "additionalProperties", Value: value.Object(value.Member{Key: "oneOf", Value: value.List(kinds...)})})
+			value.Member{Key: "additionalProperties", Value: value.Object(value.Member{Key: "oneOf", Value: value.List(kinds...)})},
+			text("description", "the displays by name"))
 	}
 }
 
@@ -188,72 +222,21 @@ func describeParam(s *Schema, p *display.Param) {
 	}
 	switch {
 	case p.Type == display.Choice:
-		s.choice(p.Key, p.Options, p.Required, doc)
+		standard := -1
+		if len(p.Default) > 0 {
+			standard = int(p.Default[0])
+		}
+		s.choice(p.Key, p.Options, standard, p.Required, doc)
 	case p.Type == display.Boolean:
 		s.flag(p.Key, len(p.Default) > 0 && p.Default[0] != 0, doc)
 	case p.MaxCount > 1:
-		s.list(p.Key, "number", p.Required, doc)
+		s.oneOrMore(p.Key, p.Required, doc, value.Object(numberMembers(num{Min: p.Min, Max: p.Max, Whole: p.Type == display.Integer, Required: true})...),
+			value.Member{Key: "default", Value: value.Numbers(p.Default)})
 	default:
 		rule := num{Min: p.Min, Max: p.Max, Required: p.Required, Whole: p.Type == display.Integer}
 		if len(p.Default) > 0 {
 			rule.Default = p.Default[0]
 		}
 		s.number(p.Key, rule, doc)
-	}
-}
-
-// Reference is the documentation of every key of study files, in Markdown.
-func Reference() string {
-	var b strings.Builder
-	b.WriteString("# Keys of a study file\n")
-	writeReference(&b, "", JSONSchema())
-	return b.String()
-}
-
-func writeReference(b *strings.Builder, path string, schema value.Value) {
-	properties, ok := schema.Get("properties")
-	if !ok {
-		for _, inner := range []string{"additionalProperties", "items"} {
-			if v, ok := schema.Get(inner); ok && v.Kind == value.Mapping {
-				writeReference(b, path+".*", v)
-			}
-		}
-		if v, ok := schema.Get("oneOf"); ok {
-			for _, kind := range v.Items {
-				writeReference(b, path, kind)
-			}
-		}
-		return
-	}
-	if path != "" {
-		b.WriteString("\n## " + strings.TrimPrefix(path, ".") + "\n\n")
-	}
-	if doc, ok := schema.Get("description"); ok {
-		b.WriteString(doc.Str + "\n\n")
-	}
-	for _, m := range properties.Members {
-		line := "- `" + m.Key + "`"
-		if doc, ok := m.Value.Get("description"); ok {
-			line += ": " + doc.Str
-		}
-		if enum, ok := m.Value.Get("enum"); ok {
-			var options []string
-			for _, o := range enum.Items {
-				options = append(options, o.Str)
-			}
-			line += " One of " + strings.Join(options, ", ") + "."
-		}
-		low, hasLow := m.Value.Get("minimum")
-		high, hasHigh := m.Value.Get("maximum")
-		if hasLow && hasHigh {
-			line += " From " + formatNumber(low.Num) + " to " + formatNumber(high.Num) + "."
-		}
-		if d, ok := m.Value.Get("default"); ok && d.Kind == value.Numeric {
-			line += " Default " + formatNumber(d.Num) + "."
-		}
-		b.WriteString(line + "\n")
-	}
-	for _, m := range properties.Members {
-		writeReference(b, path+"."+m.Key, m.Value)
 	}
 }

@@ -91,7 +91,7 @@ func walkAbout(c *codec, a *About) {
 	c.text("title", &a.Title, word{Required: true}, "title that participants read")
 	c.text("investigator", &a.Investigator, word{Required: true}, "who answers for the study")
 	c.text("contact", &a.Contact, word{Required: true}, "e-mail address or telephone number")
-	c.text("institution", &a.Institution, word{}, "")
+	c.text("institution", &a.Institution, word{}, "university, institute or company")
 	c.text("ethics_id", &a.EthicsID, word{}, "reference of the responsible ethics board")
 	c.words("languages", &a.Languages, checkLanguage, "BCP 47 codes; the first is the default")
 	if c.mode == reading && len(a.Languages) == 0 {
@@ -386,8 +386,8 @@ func walkTask(c *codec, t *Task, s *Study) {
 	c.flag("respond_during", &t.RespondDuring, false, "responses count while the stimulus is shown, and end it")
 	c.number("intertrial_ms", &t.IntertrialMs, num{Min: 0, Max: 10000, Default: 500}, "blank time after the response")
 	c.group("fixation_mark", false, "the mark to look at", func(c *codec) {
-		c.flag("shown", &t.FixationMark.Shown, true, "")
-		c.number("diameter_deg", &t.FixationMark.DiameterDeg, num{Min: 0.05, Max: 3, Default: 0.3}, "")
+		c.flag("shown", &t.FixationMark.Shown, true, "the mark is shown, before and during the stimulus")
+		c.number("diameter_deg", &t.FixationMark.DiameterDeg, num{Min: 0.05, Max: 3, Default: 0.3}, "diameter of the mark")
 		c.number("contrast", &t.FixationMark.Contrast, num{Min: -1, Max: 1, Default: -1}, "Weber contrast, −1 is black")
 	})
 	var d *DisplaySpec
@@ -410,8 +410,8 @@ func walkProcedure(c *codec, p *ProcedureSpec) {
 	oneOf(c, "scale", &p.Scale, procedure.ScaleNames, procedure.Log10, false, "axis of the levels")
 	c.number("min", &p.Min, num{Min: -inf, Max: inf, Required: true}, "lowest level, in the parameter's unit")
 	c.number("max", &p.Max, num{Min: -inf, Max: inf, Required: true}, "highest level")
-	c.whole("min_trials", &p.MinTrials, num{Min: 0, Max: 100000}, "")
-	c.whole("max_trials", &p.MaxTrials, num{Min: 1, Max: 100000, Default: 80}, "")
+	c.whole("min_trials", &p.MinTrials, num{Min: 0, Max: 100000}, "trials before the procedure may end")
+	c.whole("max_trials", &p.MaxTrials, num{Min: 1, Max: 100000, Default: 80}, "trials after which it ends")
 	c.whole("interleave", &p.Interleave, num{Min: 1, Max: 8, Default: 1}, "independent copies in random alternation")
 	c.numbers("levels", &p.Levels, num{Min: -inf, Max: inf}, "constant: the levels")
 	c.whole("repetitions", &p.Repetition, num{Min: 0, Max: 10000}, "constant: trials per level")
@@ -461,14 +461,14 @@ func fillProcedure(p *procedure.Spec) {
 }
 
 func walkBlock(c *codec, b *Block, s *Study) {
-	c.text("name", &b.Name, word{Required: true, Check: checkIdentifier}, "")
+	c.text("name", &b.Name, word{Required: true, Check: checkIdentifier}, "name of the block in the data")
 	oneOf(c, "kind", &b.Kind, BlockKindNames, Measurement, false, "practice or measurement")
 	c.reference("task", &b.Task, s.taskNames(), true, "name of the task")
 	c.reference("procedure", &b.Procedure, s.procedureNames(), false, "name of the procedure that chooses levels")
 	d := s.displayOf(b.Task)
 	walkBalance(c, b, d)
 	listed(c, "conditions", &b.Conditions, false, "one track of the procedure for each", func(c *codec, condition *Condition) {
-		c.text("name", &condition.Name, word{Required: true, Check: checkIdentifier}, "")
+		c.text("name", &condition.Name, word{Required: true, Check: checkIdentifier}, "name of the condition in the data")
 		c.settings("set", &condition.Set, d, "parameter values of the condition")
 	})
 	c.whole("trials", &b.Trials, num{Min: 0, Max: 100000}, "number of trials of a block without procedure")
@@ -534,10 +534,10 @@ func walkBalance(c *codec, b *Block, d *DisplaySpec) {
 }
 
 func walkGroup(c *codec, g *Group, s *Study) {
-	c.text("name", &g.Name, word{Required: true, Check: checkIdentifier}, "")
+	c.text("name", &g.Name, word{Required: true, Check: checkIdentifier}, "name of the group in the data")
 	c.whole("weight", &g.Weight, num{Min: 1, Max: 1000, Default: 1}, "share of participants")
 	listed(c, "set", &g.Set, false, "what differs for the group", func(c *codec, set *GroupSetting) {
-		c.reference("display", &set.Display, s.displayNames(), true, "")
+		c.reference("display", &set.Display, s.displayNames(), true, "name of the display that differs")
 		var d *DisplaySpec
 		if set.Display >= 0 && set.Display < len(s.Displays) {
 			d = &s.Displays[set.Display]
@@ -572,7 +572,7 @@ func walkQuestion(c *codec, q *Question) {
 }
 
 func walkExclusion(c *codec, e *ExclusionRule) {
-	c.text("name", &e.Name, word{Required: true, Check: checkIdentifier}, "")
+	c.text("name", &e.Name, word{Required: true, Check: checkIdentifier}, "name of the rule in the ledger of exclusions")
 	c.text("when", &e.When, word{Required: true, MaxLength: 1000}, "Common Expression Language over the measures of a run, e.g. catch_accuracy < 0.8")
 	c.text("reason", &e.Reason, word{MaxLength: 500}, "in plain words")
 }
