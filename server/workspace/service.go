@@ -301,7 +301,7 @@ func (s *Service) Judge(ctx context.Context, lab, id uuid.UUID) error {
 	if r.Outcome != store.OutcomeCompleted {
 		return nil
 	}
-	b, err := s.openBundle(ctx, r.Bundle)
+	b, err := s.OpenBundle(ctx, r.Bundle)
 	if err != nil {
 		return err
 	}
@@ -333,7 +333,8 @@ func (s *Service) Judge(ctx context.Context, lab, id uuid.UUID) error {
 	return nil
 }
 
-func (s *Service) openBundle(ctx context.Context, digest string) (bundle.Bundle, error) {
+// OpenBundle opens a stored bundle.
+func (s *Service) OpenBundle(ctx context.Context, digest string) (bundle.Bundle, error) {
 	_, signed, err := s.Store.FindBundle(ctx, digest)
 	if err != nil {
 		return bundle.Bundle{}, err

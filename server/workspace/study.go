@@ -168,7 +168,7 @@ func (s *Service) study(c echo.Context, w who) error {
 	}
 	m := pages.StudyModel{Frame: s.frame(st.Title, w), Study: studyRow(st), Link: s.Origin + "/s/" + st.Link, Bundle: st.Bundle}
 	if st.Bundle != "" {
-		b, err := s.openBundle(ctx, st.Bundle)
+		b, err := s.OpenBundle(ctx, st.Bundle)
 		if err != nil {
 			return err
 		}
@@ -325,7 +325,7 @@ func (s *Service) run(c echo.Context, w who) error {
 	if err != nil {
 		return err
 	}
-	b, err := s.openBundle(ctx, r.Bundle)
+	b, err := s.OpenBundle(ctx, r.Bundle)
 	if err != nil {
 		return err
 	}
