@@ -33,14 +33,14 @@ type questPlus struct {
 	posterior []float64 // [threshold][cell]
 	// scaled is the posterior times slope squared, mass its sum over the cells
 	// of each threshold, centre the mean log threshold that it gives.
-	scaled []float64
-	mass   []float64
-	centre float64
-	trials    int
-	level     [1]float64
-	chosen    int
-	ready     bool
-	estimate  Estimate
+	scaled   []float64
+	mass     []float64
+	centre   float64
+	trials   int
+	level    [1]float64
+	chosen   int
+	ready    bool
+	estimate Estimate
 }
 
 func newQuestPlus(s Spec) *questPlus {
