@@ -254,6 +254,24 @@ func TestChangedBytesStopTheRun(t *testing.T) {
 	}
 }
 
+// A changed engine is found before a run exists.
+func TestChangedEngineStopsTheRun(t *testing.T) {
+	l := startLab(t, "motion-coherence")
+	b, err := l.app.workspace.OpenBundle(context.Background(), l.study.Bundle)
+	if err != nil {
+		t.Fatal(err)
+	}
+	p := &participant{t: t, ctx: browser(t, 1000, 700), lab: l}
+	tamper(t, p.ctx, "/assets/"+b.Assets["engine"], func(b []byte) []byte { b[len(b)/2] ^= 1; return b })
+	p.do(emulation.SetDeviceMetricsOverride(1000, 700, 1, false), chromedp.Navigate(l.url+"/s/"+l.study.Link))
+	p.consent()
+	p.see("page-not-verified")
+	runs, err := l.app.store.FindRuns(context.Background(), l.id, l.study.ID)
+	if err != nil || len(runs) != 0 {
+		t.Errorf("%d runs, %v", len(runs), err)
+	}
+}
+
 // tamper changes the answers to requests whose address holds pattern.
 func tamper(t *testing.T, tab context.Context, pattern string, change func([]byte) []byte) {
 	t.Helper()

@@ -17,6 +17,7 @@ import (
 	"sync"
 
 	"github.com/a-h/templ"
+	"github.com/andybalholm/brotli"
 	"github.com/google/uuid"
 	"github.com/labstack/echo/v4"
 
@@ -254,8 +255,26 @@ func (s *Service) bundle(c echo.Context) error {
 	if err != nil {
 		return err
 	}
-	c.Response().Header().Set("Cache-Control", "public, max-age=31536000, immutable")
-	return c.JSON(http.StatusOK, signed)
+	text, err := json.Marshal(signed)
+	if err != nil {
+		return err
+	}
+	h := c.Response().Header()
+	h.Set("Cache-Control", "public, max-age=31536000, immutable")
+	h.Set("Vary", "Accept-Encoding")
+	if !slices.Contains(splitList(c.Request().Header.Get("Accept-Encoding")), "br") {
+		return c.JSONBlob(http.StatusOK, text)
+	}
+	var compressed bytes.Buffer
+	w := brotli.NewWriterLevel(&compressed, 7)
+	if _, err := w.Write(text); err != nil {
+		return err
+	}
+	if err := w.Close(); err != nil {
+		return err
+	}
+	h.Set("Content-Encoding", "br")
+	return c.JSONBlob(http.StatusOK, compressed.Bytes())
 }
 
 type createRequest struct {

@@ -84,7 +84,7 @@ func TestPostgresFails(t *testing.T) {
 	cluster, dir := faultCluster(t)
 	defer func() { cluster.Stop() }()
 	f := setupAt(t, cluster.OwnerURL(), cluster.ServerURL())
-	const runs, trials = 24, 300
+	const runs, trials = 16, 200
 	clients := make([]*client, runs)
 	for i := range clients {
 		r := f.begin()
