@@ -11,13 +11,6 @@ import (
 	"io/fs"
 )
 
-// EngineFlags are the build flags of the engine: a reactor module without symbol
-// table, inlining only where frames are made, since inlined copies cost 70 KB.
-var EngineFlags = []string{
-	"-buildmode=c-shared", "-ldflags=-s -w -buildid=", "-gcflags=all=-l",
-	"-gcflags=distal/experiments/display=", "-gcflags=distal/experiments/random=", "-gcflags=distal/experiments/exact=",
-}
-
 //go:embed all:dist
 var dist embed.FS
 

@@ -15,7 +15,6 @@ import (
 	"flag"
 	"fmt"
 	"os"
-	"os/exec"
 	"path/filepath"
 	"strings"
 	"time"
@@ -24,6 +23,7 @@ import (
 	"github.com/evanw/esbuild/pkg/api"
 
 	"distal/web"
+	"distal/web/build/enginebuild"
 )
 
 func main() {
@@ -90,15 +90,12 @@ func build(ctx context.Context, out string, quick bool) error {
 	return os.WriteFile(filepath.Join(out, "manifest.json"), manifest, 0o644)
 }
 
-// buildEngine compiles web/engine as a reactor module without the symbol table.
+// buildEngine compiles the engine and says how long it took.
 func buildEngine(ctx context.Context, out string) ([]byte, error) {
-	path := filepath.Join(out, "engine.wasm")
 	started := time.Now()
-	args := append([]string{"build", "-trimpath", "-buildvcs=false"}, web.EngineFlags...)
-	command := exec.CommandContext(ctx, "go", append(args, "-o", path, "./web/engine")...)
-	command.Env = append(os.Environ(), "GOOS=wasip1", "GOARCH=wasm", "CGO_ENABLED=0")
-	if text, err := command.CombinedOutput(); err != nil {
-		return nil, fmt.Errorf("compile the engine: %w\n%s", err, text)
+	path, err := enginebuild.Build(ctx, out)
+	if err != nil {
+		return nil, err
 	}
 	fmt.Printf("engine compiled in %.1f s\n", time.Since(started).Seconds())
 	return os.ReadFile(path)

@@ -6,8 +6,6 @@ import (
 	"encoding/json"
 	"math"
 	"os"
-	"os/exec"
-	"path/filepath"
 	"sync"
 	"testing"
 
@@ -20,7 +18,7 @@ import (
 	"distal/experiments/run"
 	"distal/experiments/study"
 	"distal/experiments/value"
-	"distal/web"
+	"distal/web/build/enginebuild"
 )
 
 // compileEngine builds the WebAssembly engine once.
@@ -30,11 +28,8 @@ var compileEngine = sync.OnceValues(func() ([]byte, error) {
 		return nil, err
 	}
 	defer os.RemoveAll(dir)
-	path := filepath.Join(dir, "engine.wasm")
-	command := exec.Command("go", append(append([]string{"build"}, web.EngineFlags...), "-o", path, ".")...)
-	command.Env = append(os.Environ(), "GOOS=wasip1", "GOARCH=wasm", "CGO_ENABLED=0")
-	if text, err := command.CombinedOutput(); err != nil {
-		os.Stderr.Write(text)
+	path, err := enginebuild.Build(context.Background(), dir)
+	if err != nil {
 		return nil, err
 	}
 	return os.ReadFile(path)
