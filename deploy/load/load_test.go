@@ -11,7 +11,7 @@ import (
 // How fast it is depends on the machine and is not tested here.
 func TestDrillWithFaults(t *testing.T) {
 	t.Parallel()
-	o := options{clients: 12, length: 12 * time.Second, faults: true, study: "motion-coherence"}
+	o := options{clients: 12, length: 9 * time.Second, faults: true, study: "motion-coherence"}
 	var out strings.Builder
 	r, err := drill(context.Background(), o, &out)
 	if err != nil {
