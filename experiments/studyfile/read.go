@@ -249,8 +249,11 @@ func (c *converter) mapping(list []*ast.MappingValueNode, depth int) value.Value
 }
 
 func badKey(n ast.MapKeyNode) string {
-	if _, ok := n.(*ast.MergeKeyNode); ok {
+	switch n.(type) {
+	case *ast.MergeKeyNode:
 		return "merge keys (<<) are not used in study files: write the values again"
+	case *ast.NullNode:
+		return "this word means nothing in YAML: choose another name"
 	}
 	return "keys are plain words"
 }
