@@ -205,9 +205,11 @@ export class Renderer {
     this.geometry = geometry;
   }
 
-  /** Fits the canvas to a size in device pixels. */
+  /** Fits the canvas to a size in device pixels, one of its pixels to one of the screen: CSS sizes alone would have it scaled. */
   resize(width: number, height: number): void {
     const gl = this.gl;
+    this.canvas.style.width = `${width / devicePixelRatio}px`;
+    this.canvas.style.height = `${height / devicePixelRatio}px`;
     if (width === this.width && height === this.height) return;
     this.width = this.canvas.width = width;
     this.height = this.canvas.height = height;
