@@ -234,10 +234,11 @@ func (q *questPlus) jointEntropy(i int) float64 {
 func dot(p, r []float64) float64 {
 	var a, b, c, d float64
 	for len(p) >= 4 && len(r) >= 4 {
-		a += float64(p[0] * r[0])
-		b += float64(p[1] * r[1])
-		c += float64(p[2] * r[2])
-		d += float64(p[3] * r[3])
+		x, y := (*[4]float64)(p), (*[4]float64)(r) // one check of bounds for four
+		a += float64(x[0] * y[0])
+		b += float64(x[1] * y[1])
+		c += float64(x[2] * y[2])
+		d += float64(x[3] * y[3])
 		p, r = p[4:], r[4:]
 	}
 	for i := range p {
