@@ -32,7 +32,6 @@ type track struct {
 	procedure procedure.Procedure
 	condition *study.Condition // nil where there are none
 	queue     []int
-	ended     bool
 }
 
 // openBlock starts block index of the study.
