@@ -46,7 +46,7 @@ func TestRehearsedRunsReplay(t *testing.T) {
 			for seed := range uint64(4) {
 				records := throughWire(t, rehearse(t, s, seed+1))
 				report := replay.Verify(s, run.Assignment{Seed: seed + 1}, records)
-				if !report.OK() || report.Trials < 50 || report.Outcome != run.StepDone {
+				if !report.OK() || report.Trials < 40 || report.Outcome != run.StepDone {
 					t.Fatalf("seed %d: %+v", seed+1, report)
 				}
 			}
