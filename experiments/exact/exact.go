@@ -6,8 +6,11 @@
 // or subtracted stands in an explicit float64 conversion, which forbids the
 // compiler to fuse it. Nothing allocates.
 //
-// Errors against correctly rounded results stay below 1 unit in the last place
-// for Exp, Log, Sin, Cos and Atan in the tests' ranges, 2 for the others.
+// Differences from package math, in units in the last place, stay within 2 for
+// Exp, Log and Atan, 3 for Tan, Expm1, Log1p and Log10, 10 for Exp10 (8 found in
+// 300,000 powers from 1e-12 to 1e12) and 40 for Pow (31 found for bases from 1e-6 to
+// 1e6 and exponents from -20 to 20, 5 for the exponent of sRGB). Sin and Cos are
+// within 3e-16.
 package exact
 
 import "math"
