@@ -57,15 +57,15 @@ func (c *client) upload(trials int, until time.Time) {
 // faultCluster is a cluster of the test's own, to be broken.
 func faultCluster(t *testing.T) (c *postgres.Cluster, dir string) {
 	t.Helper()
-	dir, err := os.MkdirTemp("", "distal-fault-")
+	above, err := os.MkdirTemp("", "distal-fault-")
 	if err != nil {
 		t.Fatal(err)
 	}
-	t.Cleanup(func() { os.RemoveAll(dir) })
-	if err := os.Chmod(dir, 0o711); err != nil {
+	t.Cleanup(func() { os.RemoveAll(above) })
+	if err := os.Chmod(above, 0o711); err != nil {
 		t.Fatal(err)
 	}
-	dir = filepath.Join(dir, "data")
+	dir = filepath.Join(above, "data")
 	if c, err = postgres.Start(context.Background(), dir); err != nil {
 		t.Fatal(err)
 	}
