@@ -4,6 +4,7 @@ import (
 	"bytes"
 	"context"
 	"fmt"
+	"io"
 	"net/http"
 	"net/http/httptest"
 	"os"
@@ -463,5 +464,44 @@ func (w *walker) altered(h *hurdle, address string) {
 func countRecords(ctx context.Context, l *lab, n *int) func(pgx.Tx) error {
 	return func(tx pgx.Tx) error {
 		return tx.QueryRow(ctx, `SELECT count(*) FROM records r JOIN runs USING (lab_id, run_id) WHERE study_id = $1 AND outcome = 'withdrawn'`, l.study.ID).Scan(n)
+	}
+}
+
+// What a participant's browser loads before the consent page is usable, and in all.
+func TestDownloadSize(t *testing.T) {
+	l, _, address := startPages(t)
+	origin := strings.TrimSuffix(address, "/s/"+l.study.Link)
+	assets, err := web.Assets()
+	if err != nil {
+		t.Fatal(err)
+	}
+	load := func(address string) int {
+		t.Helper()
+		request, err := http.NewRequestWithContext(context.Background(), http.MethodGet, address, nil)
+		if err != nil {
+			t.Fatal(err)
+		}
+		request.Header.Set("Accept-Encoding", "gzip, br")
+		answer, err := client(t).Do(request)
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer answer.Body.Close()
+		n, err := io.Copy(io.Discard, answer.Body)
+		if err != nil || answer.StatusCode != http.StatusOK {
+			t.Fatalf("%s: status %d, %v", address, answer.StatusCode, err)
+		}
+		t.Logf("%7d bytes  %s", n, strings.TrimPrefix(address, origin))
+		return int(n)
+	}
+	first := load(address) + load(origin+"/api/keys") + load(origin+"/api/bundles/"+l.study.Bundle) +
+		load(origin+"/assets/"+assets["participant_js"].Digest) + load(origin+"/assets/"+assets["participant_css"].Digest)
+	all := first + load(origin+"/assets/"+assets["engine"].Digest)
+	t.Logf("%d bytes before the consent page is usable, %d in all", first, all)
+	if first > 60*1024 {
+		t.Errorf("%d bytes before the consent page is usable: at most 60 KB are wanted", first)
+	}
+	if all > 600*1024 {
+		t.Errorf("%d bytes in all: at most 600 KB are wanted", all)
 	}
 }
