@@ -19,6 +19,17 @@ export function stepsBetween(deltaMs: number, refreshMs: number): number {
   return Math.max(1, Math.round(deltaMs / refreshMs));
 }
 
+/**
+ * The time of a frame whose callback runs at nowMs. A browser that was held up
+ * gives the frame the time at which it was due: what is drawn now cannot be
+ * seen before the last refresh that has passed, so whole refreshes are added.
+ */
+export function frameTime(stampMs: number, nowMs: number, refreshMs: number): number {
+  const late = nowMs - stampMs;
+  // Up to one and a half refreshes are the usual delay of a callback.
+  return late < 1.5 * refreshMs ? stampMs : stampMs + Math.floor(late / refreshMs) * refreshMs;
+}
+
 /** Collects the intervals (ms) between n + 1 successive frames. */
 export function measureIntervals(clock: FrameClock, n: number, progress: (share: number) => void): Promise<number[]> {
   return new Promise((resolve) => {

@@ -23,12 +23,12 @@ class HandClock implements FrameClock {
   get idle(): boolean {
     return this.callback === null;
   }
-  /** Lets ms pass, then gives a frame. */
-  frame(ms: number): void {
+  /** Lets ms pass, then gives a frame that was due lateMs before. */
+  frame(ms: number, lateMs = 0): void {
     this.time += ms;
     const callback = this.callback;
     this.callback = null;
-    callback?.(this.time);
+    callback?.(this.time - lateMs);
   }
 }
 
@@ -257,4 +257,35 @@ test("after the end of a trial keys do nothing", async () => {
   const m = await t.done;
   t.view.key("keydown", "Escape", t.clock.now());
   assert.equal(m.interrupted, "");
+});
+
+// Seen in Chromium: after a hold-up the waiting frame bears the time at which it
+// was due, and the next one follows in the same refresh.
+test("a frame that was held up counts from when it could be seen, and one refresh is one step", async () => {
+  const t = setup({ plan: { stimulus_frames: 20 } });
+  t.frames(2 + 5);
+  t.clock.frame(5.9 * t.period, 4.9 * t.period); // due after one refresh, run after 5.9
+  assert.equal(t.shown.at(-1), "frame 5");
+  const before = t.shown.length;
+  t.clock.frame(0.02 * t.period, 0.92 * t.period); // of the refresh that has passed already
+  assert.equal(t.shown.length, before, "nothing is drawn twice in one refresh");
+  t.clock.frame(0.1 * t.period);
+  assert.equal(t.shown.at(-1), "frame 1");
+  t.frames(9 + 1);
+  t.view.key("keydown", "ArrowLeft", t.clock.now() + 1);
+  t.frames(1);
+  const m = await t.done;
+  assert.deepEqual(m.frame_steps, [1, 1, 1, 1, 5, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1, 1].slice(0, m.frame_steps.length));
+  assert.equal(m.frame_steps.reduce((a, b) => a + b), 20);
+});
+
+test("an onset that was held up is not dated before it could be seen", async () => {
+  const t = setup();
+  t.frames(2);
+  t.clock.frame(8 * t.period, 7 * t.period);
+  t.frames(3);
+  t.view.key("keydown", "ArrowLeft", t.clock.now() + 5);
+  t.frames(1);
+  const m = await t.done;
+  assert.equal(m.onset_ms, Math.round((1000 + 10 * t.period) * 100) / 100);
 });

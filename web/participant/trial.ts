@@ -6,7 +6,7 @@
 // Light appears later than that, by compositor and panel delay, which a browser
 // cannot measure.
 
-import { stepsBetween, type FrameClock } from "./clock.js";
+import { frameTime, stepsBetween, type FrameClock } from "./clock.js";
 import type { DisplayList, Measurement, TrialPlan } from "./engine.js";
 
 export interface TaskTiming {
@@ -96,9 +96,15 @@ class Runner {
     this.handle = this.stage.clock.request(this.tick);
   }
 
-  private onFrame(now: number): void {
+  private onFrame(stamp: number): void {
     if (this.ended) return;
     if (this.stage.lost()) return this.interrupt("context_lost");
+    const now = frameTime(stamp, this.stage.clock.now(), this.plan.refresh_ms);
+    if (now - this.last < 0.5 * this.plan.refresh_ms) {
+      // A second frame in one refresh, as browsers give after a hold-up: what was drawn last stands.
+      this.handle = this.stage.clock.request(this.tick);
+      return;
+    }
     const n = Number.isNaN(this.last) ? 1 : stepsBetween(now - this.last, this.plan.refresh_ms);
     const before = this.last;
     this.last = now;
