@@ -23,6 +23,7 @@ type Asset struct {
 	Integrity string `json:"integrity"` // "sha256-…", for the page's integrity attribute
 	Bytes     int    `json:"bytes"`
 	Brotli    int    `json:"brotli_bytes"`
+	Quick     bool   `json:"quick,omitempty"` // compressed less, for development
 
 	Plain      []byte `json:"-"`
 	Compressed []byte `json:"-"` // brotli

@@ -138,9 +138,10 @@ func write(out, name, file, mediaType string, content []byte, level int, before 
 	}
 	path := filepath.Join(out, file+".br")
 	// Compressing the engine takes seconds: keep it while the content is the same.
-	if old := before[name]; old.Digest == asset.Digest {
+	asset.Quick = level != brotli.BestCompression
+	if old := before[name]; old.Digest == asset.Digest && (asset.Quick || !old.Quick) {
 		if info, err := os.Stat(path); err == nil && info.Size() == int64(old.Brotli) {
-			asset.Brotli = old.Brotli
+			asset.Brotli, asset.Quick = old.Brotli, old.Quick
 			return asset, nil
 		}
 	}
