@@ -287,6 +287,8 @@ class Participation {
         this.input.interrupt("context_lost");
         this.renderer = null;
       });
+      // What a renderer made in between has is lost as well: drawing with it would show nothing.
+      this.canvas.addEventListener("webglcontextrestored", () => (this.renderer = null), { once: true });
     }
     return this.renderer;
   }

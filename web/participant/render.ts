@@ -222,6 +222,15 @@ export class Renderer {
     gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
     gl.framebufferTexture2D(gl.FRAMEBUFFER, gl.COLOR_ATTACHMENT0, gl.TEXTURE_2D, this.texture, 0);
     gl.viewport(0, 0, width, height);
+    this.warmUp();
+  }
+
+  /** Draws one unseen dot and patch: drivers finish their programs at the first use, which must not be an onset. */
+  private warmUp(): void {
+    const dots = new Float32Array(4), patches = new Float32Array(12);
+    dots[2] = patches[2] = patches[3] = 1;
+    this.draw({ dots, dotCount: 1, patches, patchCount: 1, batches: new Int32Array([0, 0, 1, 1, 0, 1]), batchCount: 2 });
+    this.gl.finish();
   }
 
   get lost(): boolean {
