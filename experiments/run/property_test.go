@@ -8,12 +8,15 @@ import (
 	"pgregory.net/rapid"
 
 	"distal/experiments/run"
+	"distal/experiments/study"
+	"distal/experiments/value"
 )
 
 // walker takes a run along a random legal way and checks, after every record,
 // what must hold on all ways.
 type walker struct {
 	*person
+	canonical  *study.Study // the same study, read from its canonical text
 	t          *rapid.T
 	assignment run.Assignment
 
@@ -32,6 +35,7 @@ type walker struct {
 func TestAnyLegalWay(t *testing.T) {
 	t.Parallel()
 	s := readStudy(t, motley)
+	canonical := throughBundle(t, s)
 	ends := map[run.StepKind]int{}
 	rapid.Check(t, func(rt *rapid.T) {
 		a := run.Assignment{Seed: rapid.Uint64().Draw(rt, "seed"), Group: rapid.IntRange(0, 1).Draw(rt, "group"), Order: rapid.IntRange(0, 20).Draw(rt, "order")}
@@ -39,7 +43,7 @@ func TestAnyLegalWay(t *testing.T) {
 		if err != nil {
 			rt.Fatal(err)
 		}
-		w := &walker{person: &person{t: rt, study: s, run: r}, t: rt, assignment: a}
+		w := &walker{person: &person{t: rt, study: s, run: r}, canonical: canonical, t: rt, assignment: a}
 		for range rapid.SampledFrom([]int{0, 0, 12, 40, 80, 120}).Draw(rt, "head start") {
 			w.well()
 			w.invariants()
@@ -275,9 +279,24 @@ func (w *walker) invariants() {
 	}
 }
 
-// reload applies all records to a new run, through their wire form.
+// throughBundle is the study as the browser's engine has it.
+func throughBundle(t *testing.T, s *study.Study) *study.Study {
+	t.Helper()
+	tree, err := value.ParseJSON([]byte(wire(t, s.Encode())))
+	if err != nil {
+		t.Fatal(err)
+	}
+	again, problems := study.Decode(tree)
+	if problems.Failed() {
+		t.Fatal(problems)
+	}
+	return again
+}
+
+// reload applies all records to a new run of the study as a bundle holds it,
+// through their wire form.
 func (w *walker) reload() {
-	again, err := run.New(w.study, w.assignment)
+	again, err := run.New(w.canonical, w.assignment)
 	if err != nil {
 		w.t.Fatal(err)
 	}

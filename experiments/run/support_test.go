@@ -107,7 +107,7 @@ blocks:
   - name: tracks
     task: which_way
     procedure: track
-    balance: {direction_deg: [0, 180], polarity: [light, dark]}
+    balance: {polarity: [light, dark], direction_deg: [0, 180]}
     conditions:
       - {name: thin, set: {density_per_deg2: 0.4}}
       - {name: dense, set: {density_per_deg2: 1}}
