@@ -13,6 +13,17 @@ export interface MarkedPlan {
   /** Holds the page up for so long after this many presented frames; 0: never. */
   holdMs: number;
   holdAfter: number;
+  /** Presses the key so many ms after the observer saw the onset; 0: never. */
+  answerAfterMs: number;
+}
+
+/** What came of a trial. Times are ms of the page's clock. */
+export interface Outcome {
+  measurement: Measurement;
+  seen: Seen[];
+  heldFrom: number; // begin and end of the hold-up, 0 if there was none
+  heldUntil: number;
+  pressedAt: number; // when the key was pressed, 0 if it was not
 }
 
 /** What the observer saw in one frame. */
@@ -23,12 +34,12 @@ export interface Seen {
 }
 
 const places = 64;
-const task = { responseWindowMs: 1, respondDuring: false, choices: [{ name: "yes", keys: ["KeyJ"] }] };
+const task = { respondDuring: false, choices: [{ name: "yes", keys: ["KeyJ"] }] };
 
 let input: TrialInput | null = null;
 
 /** Runs one trial and gives what the recorder and what the observer say. */
-export async function runMarked(plan: MarkedPlan): Promise<{ measurement: Measurement; seen: Seen[] }> {
+export async function runMarked(plan: MarkedPlan): Promise<Outcome> {
   input ??= new TrialInput(window);
   const canvas = document.createElement("canvas");
   document.getElementById("distal")!.replaceChildren(canvas);
@@ -58,29 +69,39 @@ export async function runMarked(plan: MarkedPlan): Promise<{ measurement: Measur
     awaitAnswer: () => {},
   };
   const seen: Seen[] = [];
-  let watching = true;
-  let held = false;
+  const outcome = { heldFrom: 0, heldUntil: 0, pressedAt: 0 };
+  let finish: (value: unknown) => void;
+  const watched = new Promise((resolve) => (finish = resolve));
   const observe = (frame: number): void => {
-    if (!watching) return;
     gl.bindFramebuffer(gl.FRAMEBUFFER, null);
     gl.readPixels(0, 2, 4 * places, 1, gl.RGBA, gl.UNSIGNED_BYTE, row);
     let place = -1;
     for (let i = 0; i < places; i++) if (row[16 * i + 8]! > 220) place = i;
     seen.push({ at: performance.now(), frame, place });
-    if (plan.holdMs > 0 && presented === plan.holdAfter && !held) {
-      held = true;
-      const until = performance.now() + plan.holdMs;
-      // Begun right after a frame, as a slow task on the page would.
-      setTimeout(() => { while (performance.now() < until) { /* the page hangs */ } });
+    if (place >= 0 && seen.filter((x) => x.place >= 0).length === 1 && plan.answerAfterMs > 0) {
+      setTimeout(() => {
+        outcome.pressedAt = performance.now();
+        window.dispatchEvent(new KeyboardEvent("keydown", { code: "KeyJ" }));
+        window.dispatchEvent(new KeyboardEvent("keyup", { code: "KeyJ" }));
+      }, plan.answerAfterMs);
     }
-    requestAnimationFrame(observe);
+    if (plan.holdMs > 0 && presented === plan.holdAfter && outcome.heldFrom === 0) {
+      outcome.heldFrom = performance.now();
+      // Begun right after a frame, as a slow task on the page would.
+      setTimeout(() => {
+        while (performance.now() < outcome.heldFrom + plan.holdMs) { /* the page hangs */ }
+        outcome.heldUntil = performance.now();
+      });
+    }
+    if (place < 0 && seen.some((x) => x.place >= 0)) finish(null);
+    else requestAnimationFrame(observe);
   };
   const trial = runTrial(stage, input, {
     fixation_frames: 4, stimulus_frames: plan.stimulusFrames, refresh_ms: plan.refreshMs,
-  } as TrialPlan, task);
+  } as TrialPlan, { ...task, responseWindowMs: plan.answerAfterMs > 0 ? 10_000 : 1 });
   requestAnimationFrame(observe); // after the trial's own callback, in every frame
   const measurement = await trial;
-  watching = false;
+  await watched;
   gl.getExtension("WEBGL_lose_context")?.loseContext();
-  return { measurement, seen };
+  return { measurement, seen, ...outcome };
 }
