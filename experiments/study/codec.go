@@ -2,6 +2,7 @@ package study
 
 import (
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -509,6 +510,7 @@ func (c *codec) sentence(key string, list *[]LocalText, required bool, doc strin
 				}
 				*list = append(*list, LocalText{Language: m.Key, Text: m.Value.Str})
 			}
+			slices.SortFunc(*list, func(a, b LocalText) int { return strings.Compare(a.Language, b.Language) })
 		default:
 			c.problem(key, v, "text, or a text for each language, is expected")
 		}

@@ -2,6 +2,7 @@ package study
 
 import (
 	"math"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -305,6 +306,9 @@ func (c *codec) settings(key string, list *[]Setting, d *DisplaySpec, doc string
 				}
 			}
 		}
+		// The order of keys means nothing, and canonical members are sorted:
+		// sorted lists make the study of a file and of its bundle the same.
+		slices.SortFunc(*list, func(a, b Setting) int { return strings.Compare(a.Key, b.Key) })
 	}
 }
 
@@ -532,6 +536,7 @@ func walkBalance(c *codec, b *Block, d *DisplaySpec) {
 			}
 			b.Balance = append(b.Balance, balanced)
 		}
+		slices.SortFunc(b.Balance, func(x, y Balanced) int { return strings.Compare(x.Key, y.Key) })
 	}
 }
 

@@ -6,8 +6,12 @@ import (
 	"testing"
 	"testing/fstest"
 
+	"github.com/google/go-cmp/cmp"
+	"github.com/google/go-cmp/cmp/cmpopts"
 	"github.com/rogpeppe/go-internal/txtar"
 
+	"distal/experiments/display"
+	"distal/experiments/library"
 	"distal/experiments/study"
 	"distal/experiments/studyfile"
 	"distal/experiments/value"
@@ -74,8 +78,14 @@ func readsBack(t *testing.T, s *study.Study) {
 	if err != nil || !bytes.Equal(first, second) {
 		t.Fatalf("the canonical form changes:\n%s\n%s", first, second)
 	}
+	sameKind := cmp.Comparer(func(a, b *display.Kind) bool { return a == b })
+	if diff := cmp.Diff(s, again, sameKind, cmpopts.EquateEmpty()); diff != "" {
+		t.Fatalf("the study of the bundle is not that of the file (-file +bundle):\n%s", diff)
+	}
 }
 
+// The study that a browser reads from a bundle is in everything, also in the
+// order of things, the study of the file: else their trials would differ.
 func TestCanonicalFormReadsBack(t *testing.T) {
 	t.Parallel()
 	s, problems := studyfile.Read(baseFiles(t), studyName)
@@ -83,4 +93,11 @@ func TestCanonicalFormReadsBack(t *testing.T) {
 		t.Fatal(problems)
 	}
 	readsBack(t, s)
+	for _, name := range library.Names() {
+		s, problems := library.Read(name)
+		if problems.Failed() {
+			t.Fatal(problems)
+		}
+		readsBack(t, s)
+	}
 }
