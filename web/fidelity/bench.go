@@ -29,6 +29,7 @@ import (
 	"github.com/evanw/esbuild/pkg/api"
 
 	"distal/experiments/display"
+	"distal/web"
 )
 
 // Bench is a browser with the participant's drawing and timing code in it.
@@ -78,7 +79,7 @@ func open(ctx context.Context, more ...chromedp.ExecAllocatorOption) (*Bench, er
 	chromium, err := exec.LookPath("chromium")
 	if err != nil {
 		b.Close()
-		return nil, fmt.Errorf("Chromium is needed (Debian's package chromium): %w", err)
+		return nil, fmt.Errorf("find Chromium (Debian's package chromium): %w", err)
 	}
 	profile, err := os.MkdirTemp("", "distal-fidelity-")
 	if err != nil {
@@ -136,6 +137,11 @@ func serve() (http.Handler, error) {
 	file("/{$}", "text/html", []byte(shell))
 	file("/page.js", "text/javascript", script)
 	file("/style.css", "text/css", style)
+	assets, err := web.Assets()
+	if err != nil {
+		return nil, err
+	}
+	file("/engine.wasm", "application/wasm", assets["engine"].Plain)
 	return mux, nil
 }
 

@@ -3,6 +3,7 @@
 
 import type { DisplayList } from "../participant/engine.js";
 import { Renderer, type Geometry } from "../participant/render.js";
+import { frameCost } from "./cost.js";
 import { runMarked } from "./trial.js";
 
 export interface Picture {
@@ -94,6 +95,7 @@ const bench = {
   open,
   loseContext,
   runMarked,
+  frameCost,
   draw: (p: Picture) => renderer!.draw(asList(p)),
   grey: (p: Picture) => { renderer!.draw(asList(p)); return base64(grey()); },
   light: (p: Picture) => { renderer!.draw(asList(p)); return base64(new Uint8Array(light().buffer)); },

@@ -97,3 +97,18 @@ func TestResponseTimes(t *testing.T) {
 		t.Logf("response after %.2f ms, %.2f after the frame with the onset was ready", *m.Measurement.RTMs, m.PressedAtMs-m.Shown()[0].AtMs)
 	}
 }
+
+// A study of dots and one of patches come to a trial in the browser and have its frames drawn.
+func TestFrameCost(t *testing.T) {
+	b := open(t)
+	for _, name := range []string{"motion-coherence", "grating-direction"} {
+		c, err := b.FrameCost(name, 12)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if len(c.MainMs) != 12 || c.Dots+c.Patches == 0 {
+			t.Errorf("%s: %d frames, %d dots, %d patches", name, len(c.MainMs), c.Dots, c.Patches)
+		}
+		t.Logf("%s: %d dots, %d patches, main thread %.2f ms, raster %.1f ms (medians)", name, c.Dots, c.Patches, fidelity.Quantile(c.MainMs, 0.5), fidelity.Quantile(c.RasterMs, 0.5))
+	}
+}
