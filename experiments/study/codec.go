@@ -2,7 +2,6 @@ package study
 
 import (
 	"math"
-	"slices"
 	"strconv"
 	"strings"
 
@@ -101,7 +100,7 @@ func (c *codec) number(key string, x *float64, rule num, doc string) {
 }
 
 func (c *codec) readNumber(key string, v value.Value, x *float64, rule num) {
-	if v.Kind == value.Text {
+	if checking && v.Kind == value.Text {
 		if n, unit, ok := quantityText(v.Str); ok {
 			c.problem(key, v, "a plain number is expected, the unit is in the key: write "+key+": "+n+" (if "+unit+" is that unit)")
 			return
@@ -234,7 +233,7 @@ func (c *codec) index(key string, v value.Value, names []string) int {
 		}
 	}
 	message := quote(v.Str) + " is not known: "
-	if near := nearest(v.Str, names); near != "" {
+	if near := suggest(v.Str, names); near != "" {
 		message += "did you mean " + near + "?"
 	} else if len(names) == 0 {
 		message += "there are none to choose from"
@@ -243,6 +242,14 @@ func (c *codec) index(key string, v value.Value, names []string) int {
 	}
 	c.problem(key, v, message)
 	return -1
+}
+
+// suggest is nearest where problems are explained.
+func suggest(word string, candidates []string) string {
+	if !checking {
+		return ""
+	}
+	return nearest(word, candidates)
 }
 
 func quote(s string) string { return strconv.Quote(s) }
@@ -483,6 +490,8 @@ func listed[T any](c *codec, key string, list *[]T, required bool, doc string, w
 	}
 }
 
+const maxLanguages = 100
+
 // sentence walks a sentence that participants read: a text in the study's
 // first language, or a text per language.
 func (c *codec) sentence(key string, list *[]LocalText, required bool, doc string) {
@@ -502,6 +511,8 @@ func (c *codec) sentence(key string, list *[]LocalText, required bool, doc strin
 		case !ok:
 		case v.Kind == value.Text:
 			*list = []LocalText{{Language: c.language, Text: v.Str}}
+		case v.Kind == value.Mapping && len(v.Members) > maxLanguages:
+			c.problem(key, v, "these are more languages than the "+strconv.Itoa(maxLanguages)+" that a study can have")
 		case v.Kind == value.Mapping:
 			for _, m := range v.Members {
 				if m.Value.Kind != value.Text {
@@ -510,7 +521,7 @@ func (c *codec) sentence(key string, list *[]LocalText, required bool, doc strin
 				}
 				*list = append(*list, LocalText{Language: m.Key, Text: m.Value.Str})
 			}
-			slices.SortFunc(*list, func(a, b LocalText) int { return strings.Compare(a.Language, b.Language) })
+			sortBy(*list, func(t *LocalText) string { return t.Language })
 		default:
 			c.problem(key, v, "text, or a text for each language, is expected")
 		}
@@ -528,16 +539,12 @@ func (c *codec) finish() {
 		if contains(c.known, m.Key) {
 			continue
 		}
-		message, key := wrongUnit(m.Key, c.known, m.Value.Num, m.Value.Kind == value.Numeric)
-		if message == "" {
-			message = "this key is not known here"
-			if key = nearest(m.Key, c.visible()); key != "" {
-				message += ": did you mean " + key + "?"
-			} else {
-				message += ": it can be " + strings.Join(c.visible(), ", ")
-			}
+		message := "this key is not known here"
+		if checking {
+			var key string
+			message, key = c.unknown(m)
+			meant = append(meant, key)
 		}
-		meant = append(meant, key)
 		*c.problems = append(*c.problems, Problem{Pos: m.KeyPos, Path: c.at(m.Key), Offending: m.Key, Message: message})
 	}
 	for _, key := range c.missing {
@@ -549,6 +556,27 @@ func (c *codec) finish() {
 			p.Pos = c.in.Pos
 		}
 		*c.problems = append(*c.problems, p)
+	}
+}
+
+// unknown explains a key that nobody asked for, and says which was meant.
+func (c *codec) unknown(m value.Member) (message, meant string) {
+	if message, meant = wrongUnit(m.Key, c.known, m.Value.Num, m.Value.Kind == value.Numeric); message != "" {
+		return message, meant
+	}
+	if meant = nearest(m.Key, c.visible()); meant != "" {
+		return "this key is not known here: did you mean " + meant + "?", meant
+	}
+	return "this key is not known here: it can be " + strings.Join(c.visible(), ", "), ""
+}
+
+// sortBy sorts a short list by key, keeping equal ones in place. The sorting of
+// the standard library would take 2 KB of the engine for each type.
+func sortBy[T any](list []T, key func(*T) string) {
+	for i := 1; i < len(list); i++ {
+		for j := i; j > 0 && key(&list[j]) < key(&list[j-1]); j-- {
+			list[j], list[j-1] = list[j-1], list[j]
+		}
 	}
 }
 

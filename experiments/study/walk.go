@@ -2,7 +2,6 @@ package study
 
 import (
 	"math"
-	"slices"
 	"strconv"
 	"strings"
 
@@ -25,8 +24,9 @@ func Decode(v value.Value) (*Study, Problems) {
 	c.finish()
 	if checking {
 		check(s, v, &problems)
+		problems = problems.InOrder()
 	}
-	return s, problems.InOrder()
+	return s, problems
 }
 
 // Encode gives the canonical tree of s, with every default explicit.
@@ -308,7 +308,7 @@ func (c *codec) settings(key string, list *[]Setting, d *DisplaySpec, doc string
 		}
 		// The order of keys means nothing, and canonical members are sorted:
 		// sorted lists make the study of a file and of its bundle the same.
-		slices.SortFunc(*list, func(a, b Setting) int { return strings.Compare(a.Key, b.Key) })
+		sortBy(*list, func(s *Setting) string { return s.Key })
 	}
 }
 
@@ -320,14 +320,12 @@ func (c *codec) paramOf(key, name string, pos value.Pos, v value.Value, d *Displ
 	if i := d.Kind.Index(name); i >= 0 {
 		return &d.Kind.Params[i]
 	}
-	var known []string
-	for i := range d.Kind.Params {
-		known = append(known, d.Kind.Params[i].Key)
-	}
-	message, _ := wrongUnit(name, known, v.Num, v.Kind == value.Numeric)
-	if message == "" {
-		message = "display " + d.Name + " has no parameter " + quote(name)
-		if near := nearest(name, known); near != "" {
+	message := "display " + d.Name + " has no parameter " + quote(name)
+	if checking {
+		known := d.parameterNames()
+		if wrong, _ := wrongUnit(name, known, v.Num, v.Kind == value.Numeric); wrong != "" {
+			message = wrong
+		} else if near := nearest(name, known); near != "" {
 			message += ": did you mean " + near + "?"
 		}
 	}
@@ -536,7 +534,7 @@ func walkBalance(c *codec, b *Block, d *DisplaySpec) {
 			}
 			b.Balance = append(b.Balance, balanced)
 		}
-		slices.SortFunc(b.Balance, func(x, y Balanced) int { return strings.Compare(x.Key, y.Key) })
+		sortBy(b.Balance, func(b *Balanced) string { return b.Key })
 	}
 }
 
