@@ -161,13 +161,12 @@ func logLikelihood(n, k, yes, no float64) float64 {
 // derivatives are those of L at one θ. expected and observed are the Fisher
 // information and the negative Hessian.
 type derivatives struct {
-	value    float64
 	gradient vector
 	expected matrix
 	observed matrix
 }
 
-// differentiate sets d to L and its first and second derivatives at θ; those by the lapse
+// differentiate sets d to the first and second derivatives of L at θ; those by the lapse
 // rate are 0 unless it is free.
 func (p *problem) differentiate(theta vector, d *derivatives) {
 	*d = derivatives{}
@@ -183,7 +182,6 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 		}
 		yes := max(bottom+rise*s.f, floor)
 		no := max(lapse+rise*s.c, floor)
-		d.value += logLikelihood(p.n[i], p.k[i], yes, no)
 		w := weigh(p.n[i], p.k[i], yes, no)
 		d.addFunction(w, rise*s.d, rise*s.e, beta, v)
 		if p.free[iLapse] {
@@ -191,7 +189,6 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 		}
 	}
 	if over := theta[iSlope] - p.reference; p.steady && over > 0 {
-		d.value -= over * over / 2
 		d.gradient[iSlope] -= over
 		d.expected[iSlope][iSlope]++
 		d.observed[iSlope][iSlope]++
@@ -204,8 +201,9 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 type weights struct{ score, observed, expected float64 }
 
 func weigh(n, k, yes, no float64) weights {
-	a, b := k/yes, (n-k)/no
-	return weights{a - b, a/yes + b/no, n / yes / no}
+	toYes, toNo := 1/yes, 1/no
+	a, b := k*toYes, (n-k)*toNo
+	return weights{a - b, a*toYes + b*toNo, n * toYes * toNo}
 }
 
 // addFunction adds one level's part in threshold and slope; d and e are the first two

@@ -78,14 +78,6 @@ func compareAt(t *rapid.T, what string, got, want, size float64) {
 	}
 }
 
-// predict is P at a standardised level.
-func (p *problem) predict(theta vector, z float64) float64 {
-	lapse := theta[iLapse]
-	q := p.model.offset(p.model.Criterion, lapse).q
-	s := p.at(math.Exp(theta[iSlope])*(z-theta[iThreshold])+q, z)
-	return p.model.bottom(lapse) + (p.model.top(lapse)-p.model.bottom(lapse))*s.f
-}
-
 // TestShapes checks limits, the quantile as the inverse, and the derivatives by
 // central differences.
 func TestShapes(t *testing.T) {

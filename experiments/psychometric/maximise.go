@@ -10,7 +10,7 @@ type maximum struct {
 }
 
 const (
-	maxIterations = 200
+	maxIterations = 100
 	// decrementTolerance is the gain in L promised by a Newton step from which that step is
 	// the last: convergence being quadratic, what is left after it is far below rounding.
 	decrementTolerance = 1e-9
@@ -20,9 +20,16 @@ const (
 var longestStep = vector{0.5, 1, 0.05}
 
 // climb finds the local maximum of L above start by Newton's method within the bounds:
-// parameters at a bound that the gradient pushes outwards are held there; where the
-// observed information is not positive definite the expected one is used.
+// parameters at a bound that the gradient pushes outwards are held there.
 func (p *problem) climb(start vector) maximum {
+	return p.climbBut(start, &maximum{value: math.Inf(-1)})
+}
+
+// near is the distance in every parameter at which a climb has joined a known maximum.
+var near = vector{0.05, 0.15, 0.01}
+
+// climbBut is climb, ended early (with the known maximum) where it comes near a known one.
+func (p *problem) climbBut(start vector, known *maximum) maximum {
 	theta := p.clip(start)
 	var room [2]derivatives
 	now, next := &room[0], &room[1]
@@ -31,26 +38,29 @@ func (p *problem) climb(start vector) maximum {
 	for range maxIterations {
 		step, ok := newtonStep(now, p.active(theta, &now.gradient), damping)
 		if !ok {
-			return maximum{theta, now.value, false}
+			break
 		}
-		gain := dot(step, now.gradient) / 2
-		if gain < decrementTolerance {
-			return p.settle(theta, step, now.value, gain)
+		if dot(step, now.gradient)/2 < decrementTolerance {
+			for i := range theta {
+				theta[i] += step[i]
+			}
+			theta = p.clip(theta)
+			return maximum{theta, p.value(theta), true}
 		}
 		if p.search(&theta, shorten(step), now, next) {
 			damping = 0
 			now, next = next, now
+			if joined(theta, known.theta) && !math.IsInf(known.value, -1) {
+				return *known
+			}
 			continue
 		}
-		// No ascent along a step that promises little: rounding. Otherwise bend towards the gradient.
-		if gain < 1e-9 {
-			return maximum{theta, now.value, true}
-		}
-		if damping = math.Max(10*damping, 1e-3); damping > 1e9 {
-			return maximum{theta, now.value, false}
+		// The step promises what rounding or a bound prevents: bend towards the gradient.
+		if damping = math.Max(10*damping, 1e-2); damping > 1e9 {
+			break
 		}
 	}
-	return maximum{theta, now.value, false}
+	return maximum{theta, p.value(theta), false}
 }
 
 func (p *problem) clip(theta vector) vector {
@@ -72,30 +82,48 @@ func (p *problem) active(theta vector, gradient *vector) [3]bool {
 	return active
 }
 
-// settle takes the last step.
-func (p *problem) settle(theta, step vector, value, gain float64) maximum {
+// joined says whether theta is near a known maximum.
+func joined(theta, known vector) bool {
 	for i := range theta {
-		theta[i] += step[i]
+		if math.Abs(theta[i]-known[i]) > near[i] {
+			return false
+		}
 	}
-	return maximum{p.clip(theta), value + math.Max(gain, 0), true}
+	return true
 }
 
-// search halves the step until L rises, and moves theta there.
+// search halves the step until L rises, and moves theta there. A step after which the
+// slope of L along it is not much below zero has not passed the maximum by far and is
+// taken without computing L, which would cost as much again.
 func (p *problem) search(theta *vector, step vector, now, next *derivatives) bool {
-	for range 30 {
+	value, valued := 0.0, false
+	for range 12 {
 		to := *theta
 		for i := range to {
 			to[i] += step[i]
-			step[i] /= 2
 		}
 		to = p.clip(to)
 		if to == *theta {
 			return false
 		}
+		var moved vector // the step within the bounds
+		for i := range to {
+			moved[i] = to[i] - theta[i]
+		}
 		p.differentiate(to, next)
-		if next.value > now.value {
+		if rise := dot(now.gradient, moved); rise > 0 && dot(next.gradient, moved) > -0.5*rise {
 			*theta = to
 			return true
+		}
+		if !valued {
+			value, valued = p.value(*theta), true
+		}
+		if p.value(to) > value {
+			*theta = to
+			return true
+		}
+		for i := range step {
+			step[i] /= 2
 		}
 	}
 	return false
@@ -114,24 +142,26 @@ func shorten(step vector) vector {
 	return step
 }
 
-// newtonStep solves information · step = gradient over the active parameters.
+// newtonStep solves (observed + ridge · diagonal of expected) · step = gradient over the
+// active parameters, with the least ridge from damping up that makes the matrix positive
+// definite. It keeps the observed curvature across a narrow ridge, which the expected
+// information, off its maximum, does not know.
 func newtonStep(d *derivatives, active [3]bool, damping float64) (vector, bool) {
-	if damping == 0 {
-		if step, ok := solve(&d.observed, d.gradient, active, 0); ok {
-			return step, true
+	for ridge := damping; ridge < 1e12; ridge = math.Max(4*ridge, 1e-2) {
+		a := d.observed
+		for i := range a {
+			a[i][i] += ridge * (d.expected[i][i] + 1e-9)
 		}
-	}
-	for ridge := math.Max(damping, 1e-12); ridge < 1e3; ridge *= 100 {
-		if step, ok := solve(&d.expected, d.gradient, active, ridge); ok {
+		if step, ok := solve(&a, d.gradient, active); ok {
 			return step, true
 		}
 	}
 	return vector{}, false
 }
 
-// solve is Cholesky's method on the active rows of a, its diagonal raised by the
-// share ridge (and by ridge itself); ok is false unless a is positive definite there.
-func solve(a *matrix, b vector, active [3]bool, ridge float64) (vector, bool) {
+// solve is Cholesky's method on the active rows of a; ok is false unless a is positive
+// definite there.
+func solve(a *matrix, b vector, active [3]bool) (vector, bool) {
 	var l matrix
 	var y vector
 	for i := range 3 {
@@ -143,9 +173,6 @@ func solve(a *matrix, b vector, active [3]bool, ridge float64) (vector, bool) {
 				continue
 			}
 			s := a[i][j]
-			if i == j {
-				s += ridge * (1 + a[i][i])
-			}
 			for m := range j {
 				s -= l[i][m] * l[j][m]
 			}
@@ -189,7 +216,7 @@ func invert(a *matrix, active [3]bool) (matrix, bool) {
 		}
 		var e vector
 		e[j] = 1
-		x, ok := solve(a, e, active, 0)
+		x, ok := solve(a, e, active)
 		if !ok {
 			return matrix{}, false
 		}

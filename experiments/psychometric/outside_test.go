@@ -152,7 +152,7 @@ func agree(t *testing.T, s outsideSet, theta []float64, value float64) {
 // BenchmarkAgainstSciPy reports how many times longer SciPy's fastest suitable optimiser
 // takes for one fit of the same data, from good starting values, than Maximise, which
 // finds its own and adds standard errors, limits and a verdict. Both are in processor
-// time, so that other work on the machine counts for neither.
+// time, the best of several rounds, so that other work on the machine counts for neither.
 func BenchmarkAgainstSciPy(b *testing.B) {
 	for _, lapse := range []LapseRule{FixedLapse(0.02), FreeLapse()} {
 		for _, shape := range []Shape{Gumbel, Logistic, Gaussian} {
@@ -166,13 +166,17 @@ func BenchmarkAgainstSciPy(b *testing.B) {
 				if err := json.Unmarshal(runOutside(b, input, python, "testdata/fit.py", "time"), &times); err != nil {
 					b.Fatal(err)
 				}
-				before := processorSeconds(b)
+				const round = 500
+				own := math.Inf(1)
 				for b.Loop() {
-					if _, err := Maximise(s.data, s.model); err != nil {
-						b.Fatal(err)
+					before := processorSeconds(b)
+					for range round {
+						if _, err := Maximise(s.data, s.model); err != nil {
+							b.Fatal(err)
+						}
 					}
+					own = math.Min(own, (processorSeconds(b)-before)/round)
 				}
-				own := (processorSeconds(b) - before) / float64(b.N)
 				b.ReportMetric(own*1e6, "µs/fit")
 				b.ReportMetric(times[0].Seconds*1e6, "scipy-µs")
 				b.ReportMetric(times[0].Seconds/own, "times-faster")

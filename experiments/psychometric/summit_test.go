@@ -51,11 +51,12 @@ func randomProblem(rng *rand.Rand) (Data, Model) {
 	return simulated(rng, levels, n, m, threshold, slope, lapse).Merge(), m
 }
 
-// TestSummitIsTheGlobalMaximum counts how often a dense search finds a likelihood that
-// is higher by more than the tolerance of 1e-6.
+// TestSummitIsTheGlobalMaximum looks for data for which a dense search finds a
+// likelihood that is higher by more than the tolerance of 1e-6. SUMMITS and SEED ask for
+// more data sets, and others.
 func TestSummitIsTheGlobalMaximum(t *testing.T) {
 	t.Parallel()
-	count := 3000
+	count := 150
 	if s := os.Getenv("SUMMITS"); s != "" {
 		count, _ = strconv.Atoi(s)
 	}

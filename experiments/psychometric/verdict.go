@@ -101,6 +101,9 @@ func (r *Result) judge(p *problem, s *summit, wanted profiling) {
 	case wanted != profileNone && !r.Threshold.Interval.Closed():
 		r.Status = Open
 		r.Explanation = "There is an estimate of the threshold, but the data do not limit it on both sides: " + r.limits()
+	case wanted == profileNone:
+		r.Status = OK
+		r.Explanation = "The function has a maximum of likelihood within the levels tested."
 	default:
 		r.Status = OK
 		r.Explanation = "The data determine the threshold: " + r.limits()
