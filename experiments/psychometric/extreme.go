@@ -229,6 +229,13 @@ func (s *summit) searchWidely(p *problem) {
 	for _, start := range p.starts(room[:0]) {
 		s.climb(p, start)
 	}
+	if s.value < s.constant+clearLead {
+		// Of nearly flat data, a tail of a function whose threshold is far away may be best.
+		for _, threshold := range []float64{-1.2, 1.2} {
+			s.climbFromStep(p, vector{threshold}, 1)
+			s.climbFromStep(p, vector{threshold}, 2.5)
+		}
+	}
 	if p.free[iSlope] && s.step.value > s.value-1 {
 		for _, spread := range []float64{0.05, 0.15, 0.4} {
 			s.climbFromStep(p, s.step.theta, spread)
@@ -238,7 +245,7 @@ func (s *summit) searchWidely(p *problem) {
 
 // climbFromStep climbs from a step made less steep, of the given spread in ranges.
 func (s *summit) climbFromStep(p *problem, step vector, spread float64) {
-	step[iSlope] = math.Log(p.model.Shape.width() / spread)
+	step[iSlope] = math.Log(p.model.Shape.width() / spread) // clipped where the slope is held
 	var room [2]float64
 	for _, step[iLapse] = range p.lapseStarts(room[:0]) {
 		s.climb(p, step)

@@ -249,8 +249,10 @@ func (p *problem) steadied() *problem {
 		sum += p.n[i] * p.z[i]
 		squares += p.n[i] * p.z[i] * p.z[i]
 	}
-	mean := sum / n
-	reach := math.Sqrt(12 * math.Max(squares/n-mean*mean, 1e-12))
+	reach := 1.0 // for a single level, whose standardised scale has the function's own width
+	if variance := squares/n - sum/n*sum/n; n > 0 && variance > 1e-9 {
+		reach = math.Sqrt(12 * variance)
+	}
 	q := *p
 	q.steady = true
 	q.reference = math.Log(p.model.Shape.width() / reach)
