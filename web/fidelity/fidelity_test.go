@@ -49,7 +49,7 @@ func TestCanvasIsNotScaled(t *testing.T) {
 	for _, c := range []struct {
 		ratio float64
 		width int
-	}{{1.25, 602}, {1.5, 603}} {
+	}{{1.25, 603}, {1.5, 603}} {
 		b, err := fidelity.OpenScaled(context.Background(), c.ratio, c.width, 433)
 		if err != nil {
 			t.Fatal(err)

@@ -84,6 +84,7 @@ async function loseContext(): Promise<boolean> {
   const back = new Promise((r) => canvas!.addEventListener("webglcontextrestored", r, { once: true }));
   extension.restoreContext();
   await back;
+  if (!renderer!.lost) return false;
   // The participant's page makes a new renderer for a restored context.
   renderer = new Renderer(c, geometryNow!, true, false);
   renderer.resize(c.width, c.height);

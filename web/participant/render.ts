@@ -177,6 +177,7 @@ export class Renderer {
   private width = 0;
   private height = 0;
   private frameNumber = 0;
+  private dead: boolean;
   private dotRoom = 0;
   private patchRoom = 0;
   private readonly uniforms: Map<WebGLProgram, Record<string, WebGLUniformLocation | null>> = new Map();
@@ -185,6 +186,8 @@ export class Renderer {
     const gl = canvas.getContext("webgl2", { alpha: false, antialias: false, depth: false, stencil: false, desynchronized: true, preserveDrawingBuffer: keep, powerPreference: "high-performance" });
     if (!gl) throw new Error("WebGL2 is missing");
     this.gl = gl;
+    this.dead = gl.isContextLost();
+    canvas.addEventListener("webglcontextlost", () => (this.dead = true), { once: true });
     this.floatTarget = gl.getExtension("EXT_color_buffer_float") !== null && gl.getExtension("EXT_float_blend") !== null;
     const info = gl.getExtension("WEBGL_debug_renderer_info");
     this.name = String(gl.getParameter(info ? info.UNMASKED_RENDERER_WEBGL : gl.RENDERER)).slice(0, 200);
@@ -233,8 +236,9 @@ export class Renderer {
     this.gl.finish();
   }
 
+  /** Stays true when the context comes back: what this renderer had is gone, a new one is needed. */
   get lost(): boolean {
-    return this.gl.isContextLost();
+    return this.dead || this.gl.isContextLost();
   }
 
   /** Draws a list, or the background alone. */
