@@ -36,8 +36,7 @@ func Collect(levels []float64, correct []bool) Data {
 
 // Merge is a copy in ascending order of level with equal levels made one and empty ones left out.
 func (d Data) Merge() Data {
-	sorted := slices.Clone(d)
-	slices.SortStableFunc(sorted, func(a, b Level) int { return cmp.Compare(a.X, b.X) })
+	sorted := d.sorted()
 	merged := sorted[:0]
 	for _, l := range sorted {
 		switch last := len(merged) - 1; {
@@ -50,6 +49,12 @@ func (d Data) Merge() Data {
 		}
 	}
 	return merged
+}
+
+func (d Data) sorted() Data {
+	sorted := slices.Clone(d)
+	slices.SortStableFunc(sorted, func(a, b Level) int { return cmp.Compare(a.X, b.X) })
+	return sorted
 }
 
 // Trials is the number of trials at all levels.

@@ -234,6 +234,7 @@ func (s *summit) searchWidely(p *problem) {
 		for _, threshold := range []float64{-1.2, 1.2} {
 			s.climbFromStep(p, vector{threshold}, 1)
 			s.climbFromStep(p, vector{threshold}, 2.5)
+			s.climbFromStep(p, vector{4 * threshold}, 10)
 		}
 	}
 	if p.free[iSlope] && s.step.value > s.value-1 {

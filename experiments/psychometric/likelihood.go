@@ -29,16 +29,33 @@ type problem struct {
 	steady    bool
 	reference float64 // ln slope above which it works
 
+	// phi is the overdispersion ρ/(1 − ρ) of the beta-binomial likelihood; 0: binomial.
+	phi float64
+	// prior is normal on threshold and ln slope, where its precision is not 0.
+	prior [2]normal
+
 	start startTable
 	steps []candidate
 }
 
+// normal is a normal prior of one parameter; precision is 1/variance.
+type normal struct{ mean, precision float64 }
+
 // floor keeps logarithms and squared reciprocals finite where a probability underflows.
 const floor = 1e-150
 
-// newProblem prepares the likelihood of merged data under a checked model.
+// newProblem prepares the likelihood of merged data under a checked model, on a
+// standardised scale of its own.
 func newProblem(d Data, m Model) *problem {
-	p := &problem{model: m, width: 1}
+	p := emptyProblem(d, m)
+	center, width := p.extent()
+	p.standardise(center, width)
+	return p
+}
+
+// emptyProblem is a problem whose levels are still on the scale z.
+func emptyProblem(d Data, m Model) *problem {
+	p := &problem{model: m}
 	room := make([]float64, 3*len(d))
 	p.z, p.n, p.k = room[:len(d):len(d)], room[len(d):2*len(d):2*len(d)], room[2*len(d):]
 	p.steps = make([]candidate, len(d))
@@ -50,8 +67,6 @@ func newProblem(d Data, m Model) *problem {
 		p.z[at] = m.sign() * m.onScale(l.X)
 		p.n[at], p.k[at] = float64(l.N), float64(l.K)
 	}
-	p.standardise()
-	p.setBounds()
 	return p
 }
 
@@ -67,21 +82,29 @@ func (p *problem) finite() (from, to int) {
 	return from, to
 }
 
-func (p *problem) standardise() {
+// extent is the middle and the width of the range of levels on the scale z.
+func (p *problem) extent() (center, width float64) {
 	from, to := p.finite()
 	if from == to {
-		return
+		return 0, 1
 	}
 	low, high := p.z[from], p.z[to-1]
-	p.center = p.model.sign() * (low + high) / 2
+	center, width = p.model.sign()*(low+high)/2, 1
 	if high > low {
-		p.width = high - low
+		width = high - low
 	} else if p.model.Slope > 0 {
-		p.width = p.model.Shape.width() / p.model.Slope
+		width = p.model.Shape.width() / p.model.Slope
 	}
+	return center, width
+}
+
+func (p *problem) standardise(center, width float64) {
+	p.center, p.width = center, width
+	from, to := p.finite()
 	for i := from; i < to; i++ {
-		p.z[i] = (p.z[i] - p.model.sign()*p.center) / p.width
+		p.z[i] = (p.z[i] - p.model.sign()*center) / width
 	}
+	p.setBounds()
 }
 
 // Bounds of the search on the standardised scale. Beyond them nothing changes that
@@ -127,10 +150,18 @@ func (p *problem) value(theta vector) float64 {
 	l := 0.0
 	for i, z := range p.z {
 		s := p.at(beta*(z-theta[iThreshold])+q, z)
-		l += logLikelihood(p.n[i], p.k[i], bottom+rise*s.f, lapse+rise*s.c)
+		yes, no := bottom+rise*s.f, lapse+rise*s.c
+		if p.phi > 0 {
+			l += betaBinomial(p.n[i], p.k[i], yes, no, p.phi)
+		} else {
+			l += logLikelihood(p.n[i], p.k[i], yes, no)
+		}
 	}
 	if over := theta[iSlope] - p.reference; p.steady && over > 0 {
 		l -= over * over / 2
+	}
+	for i, n := range p.prior {
+		l -= n.precision * (theta[i] - n.mean) * (theta[i] - n.mean) / 2
 	}
 	return l
 }
@@ -183,6 +214,9 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 		yes := max(bottom+rise*s.f, floor)
 		no := max(lapse+rise*s.c, floor)
 		w := weigh(p.n[i], p.k[i], yes, no)
+		if p.phi > 0 {
+			w = weighBetaBinomial(p.n[i], p.k[i], yes, no, p.phi)
+		}
 		d.addFunction(w, rise*s.d, rise*s.e, beta, v)
 		if p.free[iLapse] {
 			d.addLapse(w, s, beta, v, rise, q, p.model.Symmetric)
@@ -192,6 +226,11 @@ func (p *problem) differentiate(theta vector, d *derivatives) {
 		d.gradient[iSlope] -= over
 		d.expected[iSlope][iSlope]++
 		d.observed[iSlope][iSlope]++
+	}
+	for i, n := range p.prior {
+		d.gradient[i] -= n.precision * (theta[i] - n.mean)
+		d.expected[i][i] += n.precision
+		d.observed[i][i] += n.precision
 	}
 	d.mirror()
 }
