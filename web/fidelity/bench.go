@@ -96,7 +96,8 @@ func open(ctx context.Context, more ...chromedp.ExecAllocatorOption) (*Bench, er
 	allocator, cancel := chromedp.NewExecAllocator(ctx, append(options, more...)...)
 	b.close = append(b.close, cancel)
 	b.ctx, cancel = chromedp.NewContext(allocator)
-	b.close = append(b.close, cancel)
+	// Cancel waits until the browser has left its profile.
+	b.close = append(b.close, func() { _ = chromedp.Cancel(b.ctx); cancel() })
 	err = chromedp.Run(b.ctx, chromedp.Navigate(b.server.URL), chromedp.WaitReady("#distal"))
 	if err != nil {
 		b.Close()

@@ -70,6 +70,7 @@ export async function runMarked(plan: MarkedPlan): Promise<Outcome> {
   };
   const seen: Seen[] = [];
   const outcome = { heldFrom: 0, heldUntil: 0, pressedAt: 0 };
+  let held = false;
   let finish: (value: unknown) => void;
   const watched = new Promise((resolve) => (finish = resolve));
   const observe = (frame: number): void => {
@@ -85,10 +86,11 @@ export async function runMarked(plan: MarkedPlan): Promise<Outcome> {
         window.dispatchEvent(new KeyboardEvent("keyup", { code: "KeyJ" }));
       }, plan.answerAfterMs);
     }
-    if (plan.holdMs > 0 && presented === plan.holdAfter && outcome.heldFrom === 0) {
-      outcome.heldFrom = performance.now();
+    if (plan.holdMs > 0 && presented >= plan.holdAfter && !held) {
+      held = true;
       // Begun right after a frame, as a slow task on the page would.
       setTimeout(() => {
+        outcome.heldFrom = performance.now();
         while (performance.now() < outcome.heldFrom + plan.holdMs) { /* the page hangs */ }
         outcome.heldUntil = performance.now();
       });
