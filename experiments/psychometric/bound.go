@@ -48,10 +48,14 @@ func (m Model) trialVariance(u, lapse float64) float64 {
 
 // goldenSection minimises a function with one minimum between a and b.
 func goldenSection(f func(float64) float64, a, b float64) float64 {
+	return goldenSectionTo(f, a, b, 1e-9)
+}
+
+func goldenSectionTo(f func(float64) float64, a, b, tolerance float64) float64 {
 	ratio := (math.Sqrt(5) - 1) / 2
 	c, d := b-ratio*(b-a), a+ratio*(b-a)
 	fc, fd := f(c), f(d)
-	for b-a > 1e-9 {
+	for b-a > tolerance {
 		if fc < fd {
 			b, d, fd = d, c, fc
 			c = b - ratio*(b-a)
