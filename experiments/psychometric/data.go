@@ -9,9 +9,9 @@ import (
 
 // Level is the outcome of all trials at one level.
 type Level struct {
-	X float64 // the level, in its own unit
-	N int     // trials
-	K int     // correct (or "yes") responses among them
+	X float64 `json:"level"`   // in its own unit
+	N int     `json:"trials"`  // number of trials
+	K int     `json:"correct"` // correct (or "yes") responses among them
 }
 
 // Data are the outcomes at the levels of one observer and condition.

@@ -253,7 +253,7 @@ func (r *Result) profiles(p *problem, s *summit, wanted profiling) {
 	}
 	if p.free[iLapse] {
 		i := p.interval(iLapse, s, 0.2*p.high[iLapse], target)
-		r.Lapse.Interval = Interval{i.low, i.high, i.openLow, i.openHigh}
+		r.Lapse.Interval = Interval{i.low, i.high, false, i.openHigh} // 0 is a limit of its own
 	}
 }
 

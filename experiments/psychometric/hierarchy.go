@@ -20,9 +20,9 @@ type Hierarchy struct {
 	// ThresholdSD is the standard deviation between runs on the scale.
 	ThresholdSD float64 `json:"threshold_sd_on_scale"`
 	// Slope is the median of β over runs and SlopeFactor e to the standard deviation of ln β.
-	Slope       float64 `json:"slope"`
-	SlopeFactor float64 `json:"slope_factor"`
-	Runs        []Shrunk
+	Slope       float64  `json:"slope"`
+	SlopeFactor float64  `json:"slope_factor"`
+	Runs        []Shrunk `json:"runs"`
 	// LogMarginal is the log marginal likelihood, without binomial coefficients.
 	LogMarginal float64 `json:"log_marginal"`
 	Iterations  int     `json:"iterations"`

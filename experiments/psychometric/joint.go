@@ -23,8 +23,8 @@ type Sharing struct {
 
 // Joint is one function per condition, fitted at once with shared parameters.
 type Joint struct {
-	Sharing    Sharing `json:"sharing"`
-	Conditions []ConditionFit
+	Sharing    Sharing        `json:"sharing"`
+	Conditions []ConditionFit `json:"conditions"`
 	// LogLikelihood is the supremum over all parameters, without binomial coefficients.
 	LogLikelihood float64 `json:"log_likelihood"`
 	Parameters    int     `json:"parameters"`
