@@ -45,6 +45,7 @@ type Canvas struct {
 	Height      int     `json:"height"`
 	PixelRatio  float64 `json:"pixelRatio"`
 	FloatTarget bool    `json:"floatTarget"`
+	Background  float64 `json:"background"` // linear light, fraction of white
 	Renderer    string  `json:"renderer"`
 }
 

@@ -43,7 +43,7 @@ function open(geometry: Geometry, dither: boolean) {
   document.getElementById("distal")!.replaceChildren(canvas);
   renderer = new Renderer(canvas, geometry, true, dither);
   renderer.resize(Math.round(innerWidth * devicePixelRatio), Math.round(innerHeight * devicePixelRatio));
-  return { width: canvas.width, height: canvas.height, pixelRatio: devicePixelRatio, floatTarget: renderer.floatTarget, renderer: renderer.name };
+  return { width: canvas.width, height: canvas.height, pixelRatio: devicePixelRatio, floatTarget: renderer.floatTarget, background: renderer.backgroundLight, renderer: renderer.name };
 }
 
 /** Bytes of the red channel as they go to the screen, from the upper left. */

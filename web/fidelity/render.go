@@ -181,7 +181,8 @@ func (b *Bench) Shifts(diameterDeg, xDeg float64) ([]Shift, error) {
 	const size = 240
 	k := 60 * 180 / math.Pi
 	setup := Setup{WidthCSSPx: size, HeightCSSPx: size, PixelRatio: 1, PxPerTan: k, BackgroundFraction: 0.5, Dither: true}
-	if _, err := b.Screen(setup); err != nil {
+	canvas, err := b.Screen(setup)
+	if err != nil {
 		return nil, err
 	}
 	var shifts []Shift
@@ -193,7 +194,7 @@ func (b *Bench) Shifts(diameterDeg, xDeg float64) ([]Shift, error) {
 		if err != nil {
 			return nil, err
 		}
-		s.floatX, s.floatSum = centroidX(light, size)
+		s.floatX, s.floatSum = centroidX(light, size, canvas.Background)
 		counts := make([]float64, size*size)
 		for range ShiftFrames {
 			grey, err := b.Grey(l)
@@ -204,7 +205,7 @@ func (b *Bench) Shifts(diameterDeg, xDeg float64) ([]Shift, error) {
 				counts[i] += linear[g] / ShiftFrames
 			}
 		}
-		s.gridX, s.gridSum = centroidX(counts, size)
+		s.gridX, s.gridSum = centroidX(counts, size, canvas.Background)
 		shifts = append(shifts, s)
 	}
 	first := shifts[0]
@@ -234,20 +235,20 @@ func (b *Bench) light(l *display.List) ([]float64, error) {
 	return out, nil
 }
 
-// centroidX is the mean place of what exceeds a tenth of the background 0.5,
-// which leaves dither noise of the background out, in px about the middle.
-func centroidX(light []float64, width int) (x, sum float64) {
+// centroidX is the mean place of what exceeds the background by a tenth, in px
+// about the middle.
+func centroidX(light []float64, width int, background float64) (x, sum float64) {
 	height := len(light) / width
 	lowX, highX, lowY, highY := width, 0, height, 0
 	for i, l := range light {
-		if l > 0.55 {
+		if l > 1.1*background {
 			lowX, highX = min(lowX, i%width), max(highX, i%width)
 			lowY, highY = min(lowY, i/width), max(highY, i/width)
 		}
 	}
 	for j := max(0, lowY-2); j <= min(height-1, highY+2); j++ {
 		for i := max(0, lowX-2); i <= min(width-1, highX+2); i++ {
-			d := light[j*width+i] - 0.5
+			d := light[j*width+i] - background
 			sum += d
 			x += d * (float64(i) + 0.5 - float64(width)/2)
 		}

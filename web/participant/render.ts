@@ -136,29 +136,50 @@ const finalFragment = `#version 300 es
 precision highp float;
 precision highp int;
 uniform highp sampler2D light;
+uniform highp sampler2D levelLight; // linear light of each grey level, 256 × 1
 uniform float gamma; // 0: sRGB
 uniform uint frame;
-uniform float levels; // 255, or 0 to leave dithering out
+uniform bool dither;
 out vec4 colour;
 uint mixBits(uint x) { x ^= x >> 16; x *= 0x7feb352du; x ^= x >> 15; x *= 0x846ca68bu; x ^= x >> 16; return x; }
 void main() {
   ivec2 at = ivec2(gl_FragCoord.xy);
   float l = clamp(texelFetch(light, at, 0).r, 0.0, 1.0);
   float v = gamma > 0.0 ? pow(l, 1.0 / gamma) : l <= 0.0031308 ? 12.92 * l : 1.055 * pow(l, 1.0 / 2.4) - 0.055;
-  if (levels > 0.0) {
+  if (dither) {
     uint h = mixBits(uint(at.x) ^ mixBits(uint(at.y) ^ mixBits(frame)));
     // Between two grey levels the brighter is shown with the probability that makes the mean luminance right.
-    float low = floor(v * levels) / levels, high = low + 1.0 / levels;
-    float lowL = gamma > 0.0 ? pow(low, gamma) : low <= 0.04045 ? low / 12.92 : pow((low + 0.055) / 1.055, 2.4);
-    float highL = gamma > 0.0 ? pow(high, gamma) : high <= 0.04045 ? high / 12.92 : pow((high + 0.055) / 1.055, 2.4);
+    int low = clamp(int(v * 255.0), 0, 254);
+    float lowL = texelFetch(levelLight, ivec2(low, 0), 0).r, highL = texelFetch(levelLight, ivec2(low + 1, 0), 0).r;
     float share = clamp((l - lowL) / (highL - lowL), 0.0, 1.0);
     // A value that is a grey level already stays: the background is even.
     if (share < 0.002) share = 0.0;
     if (share > 0.998) share = 1.0;
-    v = float(h >> 8) / 16777216.0 < share ? high : low;
+    v = (float(low) + (float(h >> 8) / 16777216.0 < share ? 1.0 : 0.0)) / 255.0;
   }
   colour = vec4(v, v, v, 1.0);
 }`;
+
+/** Linear light, as a fraction of white, that a display shows for a value of 0 … 1. */
+function lightOf(value: number, gamma: number | null): number {
+  if (gamma) return Math.pow(value, gamma);
+  return value <= 0.04045 ? value / 12.92 : Math.pow((value + 0.055) / 1.055, 2.4);
+}
+
+/** The grey level (0 … 255) whose light is nearest to a fraction of white. */
+function nearestLevel(fraction: number, gamma: number | null): number {
+  let best = 0;
+  for (let i = 1; i < 256; i++) {
+    if (Math.abs(lightOf(i / 255, gamma) - fraction) < Math.abs(lightOf(best / 255, gamma) - fraction)) best = i;
+  }
+  return best;
+}
+
+/** How far (deg) from its centre a patch can change the picture: as its vertex shader has it. */
+function patchReach(window: number, width: number, height: number): number {
+  const diagonal = Math.hypot(width, height);
+  return window > 2.5 ? 80 : window > 1.5 ? 1.5 * diagonal : 0.5 * diagonal + 0.1;
+}
 
 export class Renderer {
   readonly floatTarget: boolean;
@@ -178,6 +199,14 @@ export class Renderer {
   private height = 0;
   private frameNumber = 0;
   private dead: boolean;
+  private readonly levelTexture: WebGLTexture;
+  private background = 0; // linear light, fraction of white
+  private backgroundValue = 0; // what the screen is sent for it, 0 … 1
+  // Rectangle (device px from the lower left) beyond which a list leaves the background.
+  private left = 0;
+  private right = 0;
+  private bottom = 0;
+  private top = 0;
   private dotRoom = 0;
   private patchRoom = 0;
   private readonly uniforms: Map<WebGLProgram, Record<string, WebGLUniformLocation | null>> = new Map();
@@ -201,11 +230,30 @@ export class Renderer {
     this.patchArray = this.vertexArray(quad, this.patchBuffer, 3);
     this.finalArray = this.vertexArray(quad, null, 0);
     this.target = gl.createFramebuffer()!;
+    this.levelTexture = gl.createTexture()!;
+    gl.useProgram(this.finalProgram);
+    gl.uniform1i(this.uniforms.get(this.finalProgram)!["levelLight"]!, 1);
+    this.setGeometry(geometry);
   }
 
-  /** Sets what a degree is. */
+  /**
+   * Sets what a degree is and how the display turns values into light. A
+   * dithered background is the nearest grey level, so that all of it is even
+   * and only what a display covers needs drawing; contrasts refer to it.
+   */
   setGeometry(geometry: Geometry): void {
+    const gl = this.gl;
     this.geometry = geometry;
+    const levels = Float32Array.from({ length: 256 }, (_, i) => lightOf(i / 255, geometry.gamma));
+    const nearest = nearestLevel(geometry.backgroundFraction, geometry.gamma);
+    this.background = this.dither ? levels[nearest]! : geometry.backgroundFraction;
+    this.backgroundValue = nearest / 255;
+    gl.activeTexture(gl.TEXTURE1);
+    gl.bindTexture(gl.TEXTURE_2D, this.levelTexture);
+    gl.texImage2D(gl.TEXTURE_2D, 0, gl.R32F, 256, 1, 0, gl.RED, gl.FLOAT, levels);
+    gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MIN_FILTER, gl.NEAREST);
+    gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MAG_FILTER, gl.NEAREST);
+    gl.activeTexture(gl.TEXTURE0);
   }
 
   /** Fits the canvas to a size in device pixels, one of its pixels to one of the screen: CSS sizes alone would have it scaled. */
@@ -219,7 +267,7 @@ export class Renderer {
     gl.deleteTexture(this.texture);
     this.texture = gl.createTexture();
     gl.bindTexture(gl.TEXTURE_2D, this.texture);
-    gl.texStorage2D(gl.TEXTURE_2D, 1, this.floatTarget ? gl.RGBA32F : gl.RGBA8, width, height);
+    gl.texStorage2D(gl.TEXTURE_2D, 1, this.floatTarget ? gl.R32F : gl.RGBA8, width, height);
     gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MIN_FILTER, gl.NEAREST);
     gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MAG_FILTER, gl.NEAREST);
     gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
@@ -236,6 +284,11 @@ export class Renderer {
     this.gl.finish();
   }
 
+  /** Linear light of the background as a fraction of white. */
+  get backgroundLight(): number {
+    return this.background;
+  }
+
   /** Stays true when the context comes back: what this renderer had is gone, a new one is needed. */
   get lost(): boolean {
     return this.dead || this.gl.isContextLost();
@@ -245,34 +298,71 @@ export class Renderer {
   draw(list: DisplayList | null): void {
     const gl = this.gl;
     const g = this.geometry;
-    gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
-    gl.disable(gl.BLEND);
-    gl.clearColor(g.backgroundFraction, g.backgroundFraction, g.backgroundFraction, 1);
+    gl.bindFramebuffer(gl.FRAMEBUFFER, null);
+    gl.clearColor(this.backgroundValue, this.backgroundValue, this.backgroundValue, 1);
     gl.clear(gl.COLOR_BUFFER_BIT);
-    if (list && list.batchCount > 0) {
-      gl.enable(gl.BLEND);
-      this.upload(list);
-      for (let i = 0; i < list.batchCount; i++) {
-        this.batch(list.batches[3 * i]!, list.batches[3 * i + 1]!, list.batches[3 * i + 2]!);
-      }
-      gl.disable(gl.BLEND);
+    this.frameNumber++;
+    if (!this.bound(list)) return;
+    gl.enable(gl.SCISSOR_TEST);
+    gl.scissor(this.left, this.bottom, this.right - this.left, this.top - this.bottom);
+    gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
+    gl.clearColor(this.background, this.background, this.background, 1);
+    gl.clear(gl.COLOR_BUFFER_BIT);
+    gl.enable(gl.BLEND);
+    this.upload(list);
+    for (let i = 0; i < list.batchCount; i++) {
+      this.batch(list.batches[3 * i]!, list.batches[3 * i + 1]!, list.batches[3 * i + 2]!);
     }
+    gl.disable(gl.BLEND);
     gl.bindFramebuffer(gl.FRAMEBUFFER, null);
     gl.useProgram(this.finalProgram);
     const u = this.uniforms.get(this.finalProgram)!;
     gl.uniform1f(u["gamma"]!, g.gamma ?? 0);
-    gl.uniform1ui(u["frame"]!, this.frameNumber++);
-    gl.uniform1f(u["levels"]!, this.dither ? 255 : 0);
+    gl.uniform1ui(u["frame"]!, this.frameNumber);
+    gl.uniform1i(u["dither"]!, this.dither ? 1 : 0);
     gl.bindVertexArray(this.finalArray);
     gl.drawArrays(gl.TRIANGLE_STRIP, 0, 4);
+    gl.disable(gl.SCISSOR_TEST);
   }
 
-  /** Linear light of the last frame as fractions of white, for tests; row 0 is the bottom. */
+  /** Finds the rectangle that a list can change; false if none of it is on the canvas. */
+  private bound(list: DisplayList | null): list is DisplayList {
+    this.left = this.right = 0;
+    if (!list || list.batchCount === 0) return false;
+    let left = Infinity, right = -Infinity, bottom = Infinity, top = -Infinity;
+    const { dots, patches } = list;
+    for (let i = 0; i < 4 * list.dotCount; i += 4) {
+      const x = dots[i]!, y = dots[i + 1]!, reach = 0.5 * dots[i + 2]!;
+      left = Math.min(left, x - reach); right = Math.max(right, x + reach);
+      bottom = Math.min(bottom, y - reach); top = Math.max(top, y + reach);
+    }
+    for (let i = 0; i < 12 * list.patchCount; i += 12) {
+      const x = patches[i]!, y = patches[i + 1]!, reach = patchReach(patches[i + 10]!, patches[i + 2]!, patches[i + 3]!);
+      left = Math.min(left, x - reach); right = Math.max(right, x + reach);
+      bottom = Math.min(bottom, y - reach); top = Math.max(top, y + reach);
+    }
+    this.left = this.pixel(left, -1, this.width); this.right = this.pixel(right, 1, this.width);
+    this.bottom = this.pixel(bottom, -1, this.height); this.top = this.pixel(top, 1, this.height);
+    return this.right > this.left && this.top > this.bottom;
+  }
+
+  /** The device pixel at an angle, moved outward by what the smoothing of edges needs. */
+  private pixel(deg: number, outward: number, size: number): number {
+    const angle = Math.max(-80, Math.min(80, deg)) * (Math.PI / 180);
+    const at = size / 2 + Math.tan(angle) * this.geometry.devicePxPerMm * this.geometry.distanceMm + 4 * outward;
+    return Math.max(0, Math.min(size, outward < 0 ? Math.floor(at) : Math.ceil(at)));
+  }
+
+  /** Linear light of the last frame as fractions of white, for tests; row 0 is the bottom, red holds it. */
   readLight(): Float32Array {
     const gl = this.gl;
-    const out = new Float32Array(4 * this.width * this.height);
+    const out = new Float32Array(4 * this.width * this.height).fill(this.background);
+    const width = this.right - this.left, rows = this.top - this.bottom;
+    if (width <= 0 || rows <= 0) return out;
+    const drawn = new Float32Array(4 * width * rows);
     gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
-    gl.readPixels(0, 0, this.width, this.height, gl.RGBA, gl.FLOAT, out);
+    gl.readPixels(this.left, this.bottom, width, rows, gl.RGBA, gl.FLOAT, drawn);
+    for (let y = 0; y < rows; y++) out.set(drawn.subarray(4 * width * y, 4 * width * (y + 1)), 4 * ((this.bottom + y) * this.width + this.left));
     return out;
   }
 
@@ -305,7 +395,7 @@ export class Renderer {
     const g = this.geometry;
     gl.uniform2f(u["halfSize"]!, this.width / 2, this.height / 2);
     gl.uniform1f(u["pxPerTan"]!, g.devicePxPerMm * g.distanceMm);
-    gl.uniform1f(u["background"]!, g.backgroundFraction);
+    gl.uniform1f(u["background"]!, this.background);
     gl.bindVertexArray(dots ? this.dotArray : this.patchArray);
     gl.bindBuffer(gl.ARRAY_BUFFER, dots ? this.dotBuffer : this.patchBuffer);
     const groups = dots ? 1 : 3;
@@ -358,7 +448,7 @@ export class Renderer {
     gl.linkProgram(p);
     if (!gl.getProgramParameter(p, gl.LINK_STATUS) && !gl.isContextLost()) throw new Error(`shader program: ${gl.getProgramInfoLog(p)}`);
     const names: Record<string, WebGLUniformLocation | null> = {};
-    for (const name of ["halfSize", "pxPerTan", "background", "gamma", "frame", "levels", "light"]) names[name] = gl.getUniformLocation(p, name);
+    for (const name of ["halfSize", "pxPerTan", "background", "gamma", "frame", "dither", "light", "levelLight"]) names[name] = gl.getUniformLocation(p, name);
     this.uniforms.set(p, names);
     return p;
   }
