@@ -49,7 +49,21 @@ func Build(ctx context.Context, out string) (string, error) {
 	if _, err := goTool(ctx, append(args, enginePackage)...); err != nil {
 		return "", fmt.Errorf("compile the engine: %w", err)
 	}
+	if err := stripFile(path); err != nil {
+		return "", fmt.Errorf("make the engine smaller: %w", err)
+	}
 	return path, nil
+}
+
+func stripFile(path string) error {
+	module, err := os.ReadFile(path)
+	if err != nil {
+		return err
+	}
+	if module, err = stripTracebacks(module); err != nil {
+		return err
+	}
+	return os.WriteFile(path, module, 0o644)
 }
 
 func goTool(ctx context.Context, args ...string) (string, error) {
