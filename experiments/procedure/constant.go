@@ -32,6 +32,16 @@ func (c *constant) Next() ([]float64, bool) {
 
 func (c *constant) Record(int) { c.trials++ }
 
+// Postpone moves the level of the next trial to the end of the track: its trial
+// did not count.
+func (c *constant) Postpone() {
+	if c.trials < len(c.order) {
+		level := c.order[c.trials]
+		copy(c.order[c.trials:], c.order[c.trials+1:])
+		c.order[len(c.order)-1] = level
+	}
+}
+
 func (c *constant) Trials() int { return c.trials }
 
 func (c *constant) Progress() float64 { return min(1, float64(c.trials)/float64(max(1, len(c.order)))) }

@@ -44,3 +44,28 @@ func TestConstantIsBalanced(t *testing.T) {
 		t.Errorf("only %d different orders in 40 sets", len(orders))
 	}
 }
+
+// Levels that are put off come at the end; every level is still shown as often
+// as it was to be.
+func TestPostponedLevelsComeLast(t *testing.T) {
+	t.Parallel()
+	spec := procedure.Spec{Method: procedure.Constant, Levels: []float64{1, 2, 3}, Repetition: 4}
+	p := procedure.New(spec, random.New(3, 0, random.PurposeProcedure))
+	first, _ := p.Next()
+	level := first[0]
+	p.(procedure.Postponer).Postpone()
+	counts := map[float64]int{}
+	last := 0.0
+	for {
+		levels, more := p.Next()
+		if !more {
+			break
+		}
+		last = levels[0]
+		counts[last]++
+		p.Record(1)
+	}
+	if last != level || counts[1] != 4 || counts[2] != 4 || counts[3] != 4 {
+		t.Errorf("level %g came last, put off was %g; counts %v", last, level, counts)
+	}
+}

@@ -26,6 +26,10 @@ type Procedure interface {
 	Estimate() Estimate
 }
 
+// A Postponer is a Procedure that can put off the level that Next gives, because
+// its trial did not count. Other procedures give the level again.
+type Postponer interface{ Postpone() }
+
 // Estimate is a procedure's own estimate of the threshold on the level's scale.
 // Valid is false while there is none (no reversals yet, say): the numbers are
 // then zero, and Reason says why.

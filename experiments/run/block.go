@@ -25,6 +25,7 @@ type block struct {
 	sinceBreak  int
 	missedInRow int
 	breakDue    bool
+	repeated    int // trials repeated because a frame was dropped
 }
 
 // track is one procedure with its condition.
@@ -221,12 +222,16 @@ func (p *TrialPlan) setLevel(r *Run, spec *study.Block, proc procedure.Procedure
 
 // record takes the outcome of the trial that was planned.
 func (b *block) record(r *Run, p *TrialPlan, t *TrialRecord) {
-	if t.Interrupted != "" {
+	if t.Interrupted != "" && t.Interrupted != DroppedFrame {
 		return
 	}
 	b.shown++
 	b.sinceBreak++
 	b.lastCatch = p.Catch
+	if t.Interrupted != "" {
+		b.postpone(p)
+		return
+	}
 	if t.Response == "" && p.CorrectChoice >= 0 {
 		// Without an answer nothing is known: the same level comes again.
 		b.missedInRow++
@@ -256,13 +261,36 @@ func (b *block) record(r *Run, p *TrialPlan, t *TrialRecord) {
 	}
 }
 
+// queueOf is the list of crossings that the trial was taken from.
+func (b *block) queueOf(p *TrialPlan) *[]int {
+	if p.Track >= 0 {
+		return &b.tracks[p.Track].queue
+	}
+	return &b.queue
+}
+
 // pop removes the crossing that the trial used.
 func (b *block) pop(p *TrialPlan) {
-	queue := &b.queue
-	if p.Track >= 0 {
-		queue = &b.tracks[p.Track].queue
-	}
-	if len(*queue) > 0 {
+	if queue := b.queueOf(p); len(*queue) > 0 {
 		*queue = (*queue)[1:]
+	}
+}
+
+// repeats tells whether a trial with so many dropped frames is to be repeated.
+func (b *block) repeats(spec *study.Block, dropped int) bool {
+	return dropped > 0 && b.repeated < spec.RepeatDropped
+}
+
+// postpone has the trial come again later: what it used goes to the end.
+func (b *block) postpone(p *TrialPlan) {
+	b.repeated++
+	if queue := b.queueOf(p); len(*queue) > 0 {
+		*queue = append((*queue)[1:], (*queue)[0])
+	}
+	if p.Track < 0 {
+		return
+	}
+	if later, ok := b.tracks[p.Track].procedure.(procedure.Postponer); ok {
+		later.Postpone()
 	}
 }

@@ -134,8 +134,12 @@ type TrialRecord struct {
 	Dropped       int       // "dropped_frames": refreshes missed in the stimulus phase
 	JitterMs      float64   // "jitter_ms"
 	Digest        string    // "digest": 16 hex digits over the display lists of all presented stimulus frames
-	Interrupted   string    // "interrupted": "" or the event that broke the trial (hidden, resized, context_lost, escape); such a trial counts for nothing and is asked again
+	Interrupted   string    // "interrupted": "" or what spoiled the trial (hidden, resized, context_lost, escape, DroppedFrame …); such a trial counts for nothing and is asked again
 }
+
+// DroppedFrame stands in TrialRecord.Interrupted where a frame of the stimulus
+// was dropped and the block has such trials repeated.
+const DroppedFrame = "dropped_frame"
 
 // Event: something that happened beside the trials.
 type Event struct {

@@ -312,10 +312,9 @@ func (r *Run) applyTrial(p *TrialPlan, t *TrialRecord) error {
 	}
 	r.number++
 	r.next, r.show.plan = nil, nil
-	if t.Interrupted != "" {
+	r.redo = nil
+	if t.Interrupted != "" && t.Interrupted != DroppedFrame {
 		r.redo = p
-	} else {
-		r.redo = nil
 	}
 	r.block.record(r, p, t)
 	return nil
@@ -345,6 +344,8 @@ func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {
 		return "right or wrong differs"
 	case t.Dropped != dropped(t.Steps):
 		return "the dropped frames are not those of the frame steps"
+	case (t.Interrupted == "" || t.Interrupted == DroppedFrame) && (t.Interrupted != "") != r.block.repeats(&r.study.Blocks[p.Block], t.Dropped):
+		return "whether it is repeated for a dropped frame differs"
 	}
 	return ""
 }

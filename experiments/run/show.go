@@ -190,6 +190,9 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 		t.ResponseMs = math.NaN()
 	}
 	t.Dropped = dropped(m.Steps)
+	if t.Interrupted == "" && r.block.repeats(spec, t.Dropped) {
+		t.Interrupted, t.Correct = DroppedFrame, -1
+	}
 	t.JitterMs = jitter(m.Steps, m.IntervalsMs)
 	return t
 }

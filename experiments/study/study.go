@@ -199,7 +199,10 @@ type Block struct {
 	Catch      Catch
 	Practice   Criterion
 	BreakEvery int // a break after so many trials, 0: only after the block
-	Message    []LocalText
+	// RepeatDropped is how many trials of the block, at most, are repeated because
+	// a frame of their stimulus was dropped, 0 for none.
+	RepeatDropped int
+	Message       []LocalText
 }
 
 // BlockKind is practice or measurement.

@@ -488,6 +488,7 @@ func walkBlock(c *codec, b *Block, s *Study) {
 		oneOf(c, "otherwise", &b.Practice.Otherwise, AfterPracticeNames, GoOn, false, "what happens if it is not met")
 	})
 	c.whole("break_every", &b.BreakEvery, num{Min: 0, Max: 10000}, "a break after so many trials, 0: none inside the block")
+	c.whole("repeat_dropped", &b.RepeatDropped, num{Min: 0, Max: 10000}, "trials with a dropped stimulus frame that are repeated at the end of the block, at most; 0: none")
 	c.sentence("message", &b.Message, false, "shown before the block")
 }
 

@@ -353,7 +353,7 @@ func trialColumns() []column[trialRow] {
 		{"dropped_frames", "refreshes", "missed while the stimulus was shown", "", func(r trialRow) string { return strconv.Itoa(r.t.Dropped) }},
 		{"jitter_ms", "ms", "standard deviation of the intervals that were on time", "fewer than two", func(r trialRow) string { return number(r.t.JitterMs) }},
 		{"digest", "", "FNV-1a (64 bits) over the display lists of all presented stimulus frames, 16 hexadecimal digits", "", func(r trialRow) string { return r.t.Digest }},
-		{"interrupted", "", "event that broke the trial, which was then asked again", "not interrupted", func(r trialRow) string { return r.t.Interrupted }},
+		{"interrupted", "", "what spoiled the trial, which then counts for nothing and was asked again: an event (hidden, escape …), or dropped_frame where the study has such trials repeated", "not interrupted", func(r trialRow) string { return r.t.Interrupted }},
 	}
 }
 

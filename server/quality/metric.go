@@ -42,6 +42,7 @@ var Metrics = []Metric{
 		return share(t.main, func(r *run.TrialRecord) bool { return r.Dropped > 0 }, every)
 	}},
 	{"interrupted_trials", "trials", "trials broken off (page hidden, window changed, Escape) and asked again", func(t trials) float64 { return float64(t.interrupted) }},
+	{"repeated_trials", "trials", "trials with a dropped stimulus frame that count for nothing and were asked again", func(t trials) float64 { return float64(t.repeated) }},
 	{"focus_lost", "times", "how often the page lost the focus or was hidden", func(t trials) float64 { return float64(t.focusLost) }},
 	{"fullscreen_left", "times", "how often full screen was left", func(t trials) float64 { return float64(t.fullscreenLeft) }},
 	{"refresh_hz", "Hz", "refresh rate found in the last display check", func(t trials) float64 {
@@ -81,7 +82,7 @@ var Metrics = []Metric{
 // trials is a run's records sorted by what they are good for.
 type trials struct {
 	main, caught, practice []*run.TrialRecord
-	interrupted            int
+	interrupted, repeated  int
 	focusLost              int
 	fullscreenLeft         int
 	card                   *run.Card
@@ -139,6 +140,8 @@ func sortRecords(records []run.Record) trials {
 
 func (t *trials) addTrial(r *run.TrialRecord) {
 	switch {
+	case r.Interrupted == run.DroppedFrame:
+		t.repeated++
 	case r.Interrupted != "":
 		t.interrupted++
 	case r.Practice:
