@@ -143,7 +143,7 @@ const DroppedFrame = "dropped_frame"
 
 // Event: something that happened beside the trials.
 type Event struct {
-	Name   string // "name": focus_lost, focus_gained, hidden, visible, fullscreen_left, fullscreen_entered, resized, zoomed, context_lost, context_restored, reloaded, resumed, escape
+	Name   string // "name": focus_lost, focus_gained, hidden, visible, fullscreen_left, fullscreen_entered, resized, zoomed, context_lost, context_restored, reloaded, resumed, escape, clock_set
 	Detail string // "detail": short free text, e.g. the new device pixel ratio
 }
 

@@ -1,7 +1,7 @@
 import assert from "node:assert/strict";
 import { test } from "node:test";
 
-import { measureIntervals, stepsBetween, type FrameClock } from "./clock.js";
+import { clockWatch, measureIntervals, stepsBetween, type FrameClock } from "./clock.js";
 
 // Refresh intervals are 1000 ms / rate.
 const cases: { given: string; deltaMs: number; rateHz: number; expect: number }[] = [
@@ -31,4 +31,18 @@ test("measures the intervals between successive frames and says how far it is", 
   assert.deepEqual(await measureIntervals(clock, 4, (s) => shares.push(s)), [16.667, 16.667, 33.333, 16.667]);
   assert.deepEqual(shares, [0, 0.25, 0.5, 0.75, 1]);
   assert.equal(next, 5, "no frame is asked for after the last one");
+});
+
+test("a clock that was set is told once, with its step", () => {
+  let day = 1_700_000_000_000, page = 1000;
+  const step = clockWatch(() => day, () => page);
+  const pass = (ms: number) => { day += ms; page += ms; };
+  pass(5000);
+  assert.equal(step(), 0);
+  pass(100); day -= 3_600_000;
+  assert.equal(step(), -3_600_000);
+  pass(100);
+  assert.equal(step(), 0);
+  pass(100); day += 200; // slewed by the system
+  assert.equal(step(), 0);
 });

@@ -30,6 +30,18 @@ export function frameTime(stampMs: number, nowMs: number, refreshMs: number): nu
   return late < 1.5 * refreshMs ? stampMs : stampMs + Math.floor(late / refreshMs) * refreshMs;
 }
 
+/** Tells by how much (ms) the clock of the day was set since it was last asked, 0 for less than half a second. */
+export function clockWatch(day: () => number, page: () => number): () => number {
+  let before = day() - page();
+  return () => {
+    const now = day() - page();
+    const step = now - before;
+    if (Math.abs(step) < 500) return 0;
+    before = now;
+    return Math.round(step);
+  };
+}
+
 /** Collects the intervals (ms) between n + 1 successive frames. */
 export function measureIntervals(clock: FrameClock, n: number, progress: (share: number) => void): Promise<number[]> {
   return new Promise((resolve) => {

@@ -6,7 +6,7 @@
 
 import { call } from "./api.js";
 import { cardPage, checkPage, distancePage, enterFullscreen } from "./calibrate.js";
-import { browserClock } from "./clock.js";
+import { browserClock, clockWatch } from "./clock.js";
 import { Engine, type Measurement, type Step, type TrialPlan } from "./engine.js";
 import { renderMarkdown, statements } from "./markdown.js";
 import { known, say, setLanguage } from "./messages.js";
@@ -272,6 +272,8 @@ class Participation {
 
   private seenBlock = "";
 
+  private readonly clockStep = clockWatch(() => Date.now(), () => performance.now());
+
   // Trials.
 
   private stageRenderer(): Renderer {
@@ -332,6 +334,8 @@ class Participation {
     const m = await runTrial(stage, this.input, plan, { responseWindowMs: task.response_window_ms, respondDuring: task.respond_during, choices });
     this.inTrial = false;
     await this.recordTrial(m);
+    const stepMs = this.clockStep();
+    if (stepMs !== 0) this.event("clock_set", String(stepMs));
     if (m.interrupted !== "") return this.interrupted(m);
     await this.afterTrial(plan, m, renderer, task.intertrial_ms);
   }

@@ -228,6 +228,19 @@ for (const c of interruptions) {
   });
 }
 
+test("a device that slept during the stimulus ends the trial, a short hold-up does not", async () => {
+  const t = setup({ plan: { stimulus_frames: 200 } });
+  t.frames(4);
+  t.clock.frame(900);
+  assert.equal(t.measured(), null);
+  t.clock.frame(90_000);
+  const m = await t.done;
+  assert.equal(m.interrupted, "held_up");
+  assert.equal(t.shown.at(-2), "blank");
+  assert.equal(m.frame_steps.length, m.intervals_ms.length);
+  assert.ok(m.intervals_ms.at(-1)! > 89_000);
+});
+
 test("an interruption before the onset leaves no times", async () => {
   const t = setup();
   t.frames(1);

@@ -29,13 +29,16 @@ export interface Stage {
 
 const maxFrames = 36_000; // 2.5 minutes at 240 Hz
 
+/** A gap between two frames (ms) that no busy page makes: the device slept or the page was stopped. */
+export const longestGapMs = 1000;
+
 const times = new Float64Array(maxFrames);
 const steps = new Int32Array(maxFrames);
 
 const hundredth = (x: number): number => Math.round(x * 100) / 100;
 
 /** Reasons that break off a trial. */
-export type Interruption = "escape" | "hidden" | "focus_lost" | "fullscreen_left" | "resized" | "zoomed" | "context_lost";
+export type Interruption = "escape" | "hidden" | "focus_lost" | "fullscreen_left" | "resized" | "zoomed" | "context_lost" | "held_up";
 
 /** Listens for answers and interruptions while a trial runs. */
 export class TrialInput {
@@ -108,6 +111,7 @@ class Runner {
     const n = Number.isNaN(this.last) ? 1 : stepsBetween(now - this.last, this.plan.refresh_ms);
     const before = this.last;
     this.last = now;
+    if (this.frames > 0 && Number.isNaN(this.offset) && now - before > longestGapMs) return this.interrupt("held_up");
     if (this.fixationLeft > 0) {
       // The list is the same in every frame of the phase; drawing it again keeps the dither alive.
       if (!Number.isNaN(before)) this.fixationLeft -= n;
