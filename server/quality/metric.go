@@ -22,7 +22,7 @@ type Metric struct {
 type Measures []float64
 
 // Metrics is the table of measures. Times of responses are from stimulus onset.
-var Metrics = []Metric{
+var Metrics = append([]Metric{
 	{"trials", "trials", "measurement trials that count: not practice, not catch, not interrupted", func(t trials) float64 { return float64(len(t.main)) }},
 	{"accuracy", "proportion", "correct among the answered measurement trials", func(t trials) float64 { return share(t.main, right, answered) }},
 	{"catch_trials", "trials", "catch trials shown", func(t trials) float64 { return float64(len(t.caught)) }},
@@ -77,7 +77,7 @@ var Metrics = []Metric{
 	}},
 	{"practice_accuracy", "proportion", "correct among the practice trials", func(t trials) float64 { return share(t.practice, right, every) }},
 	{"minutes", "min", "from consent to the last record", func(t trials) float64 { return t.minutes }},
-}
+}, timingMetrics...)
 
 // trials is a run's records sorted by what they are good for.
 type trials struct {

@@ -338,6 +338,12 @@ func (s *Service) run(c echo.Context, w who) error {
 		m.Plots = append(m.Plots, psychometricPlot(t))
 	}
 	fillRecords(records, &m)
+	for _, p := range quality.Phases(records) {
+		m.Phases = append(m.Phases, pages.PhaseRow{
+			Task: p.Task, Planned: fmt.Sprintf("%d (%.1f ms)", p.PlannedFrames, p.PlannedMs), Median: text(p.MedianMs, 4), Longest: text(p.LongestMs, 4),
+			Trials: p.Trials, Exact: p.Exact, Late: p.Late, EndedEarly: p.EndedEarly,
+		})
+	}
 	decisions, err := s.Store.FindExclusions(ctx, w.lab, r.Study)
 	if err != nil {
 		return err

@@ -99,6 +99,12 @@ type RunPlot struct {
 	Threshold, Low, High              float64
 }
 
+// PhaseRow compares planned with shown stimuli of one task.
+type PhaseRow struct {
+	Task, Planned, Median, Longest  string
+	Trials, Exact, Late, EndedEarly int
+}
+
 // RunModel is the page of a run.
 type RunModel struct {
 	Frame               Frame
@@ -110,6 +116,7 @@ type RunModel struct {
 	Calibration         []string
 	Events              []string
 	IntervalsMs         []float64
+	Phases              []PhaseRow
 	Decisions           []Decision
 }
 
