@@ -60,8 +60,9 @@ func (h *hurdle) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	_, _ = w.Write(body)
 }
 
-// startPages starts a lab whose study has every kind of page and few trials.
-func startPages(t *testing.T) (*lab, *hurdle, string) {
+// startPages starts a lab whose study has every kind of page and few trials,
+// and is changed further before its launch.
+func startPages(t *testing.T, changes ...func(*study.Study)) (*lab, *hurdle, string) {
 	t.Helper()
 	l := startLab(t, "motion-coherence")
 	s := *l.spec
@@ -82,6 +83,9 @@ func startPages(t *testing.T) (*lab, *hurdle, string) {
 		study.Question{Name: "screen-age", Type: study.NumberQuestion, Ask: both("How old is your screen?", "Wie alt ist Ihr Bildschirm?"), Min: 0, Max: 40, Unit: "years"},
 		study.Question{Name: "hand", Type: study.ChoiceQuestion, Ask: both("Which hand answered?", "Mit welcher Hand haben Sie geantwortet?"),
 			Options: []study.Option{{Name: "left", Label: both("the left hand", "mit der linken")}, {Name: "right", Label: both("the right hand", "mit der rechten")}}})
+	for _, change := range changes {
+		change(&s)
+	}
 	id, err := l.app.workspace.Launch(context.Background(), l.id, l.admin, &s)
 	if err != nil {
 		t.Fatal(err)

@@ -66,6 +66,7 @@ export async function runMarked(plan: MarkedPlan): Promise<Outcome> {
     },
     draw: (l) => renderer.draw(l),
     lost: () => renderer.lost,
+    rescaled: () => false,
     awaitAnswer: () => {},
   };
   const seen: Seen[] = [];

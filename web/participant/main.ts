@@ -324,6 +324,8 @@ class Participation {
       frame: (n) => this.engine.frame(n),
       draw: (list) => renderer.draw(list),
       lost: () => renderer.lost,
+      // A screen with another pixel ratio may leave the window's size as it is: no event tells.
+      rescaled: () => devicePixelRatio !== this.calibration.pixelRatio,
       awaitAnswer: (yes) => {
         this.buttons.hidden = !yes;
         this.canvas.dataset["phase"] = yes ? "answer" : "over";

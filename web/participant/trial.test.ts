@@ -49,7 +49,7 @@ function setup(changes: { plan?: Partial<TrialPlan>; task?: Partial<TaskTiming>;
   const shown: string[] = [];
   const view = new FakeWindow();
   const input = new TrialInput(view as unknown as Window);
-  let lost = false;
+  let lost = false, rescaled = false;
   let label = "";
   const stage: Stage = {
     clock,
@@ -58,6 +58,7 @@ function setup(changes: { plan?: Partial<TrialPlan>; task?: Partial<TaskTiming>;
     frame: (n) => ((label = `frame ${n}`), list),
     draw: (l) => shown.push(l === null ? "blank" : label),
     lost: () => lost,
+    rescaled: () => rescaled,
     awaitAnswer: (yes) => shown.push(yes ? "answer" : "over"),
   };
   const plan = { fixation_frames: 2, stimulus_frames: 3, ramp_frames: 0, refresh_ms: 1000 / rateHz, correct_choice: 0, ...changes.plan } as TrialPlan;
@@ -71,6 +72,7 @@ function setup(changes: { plan?: Partial<TrialPlan>; task?: Partial<TaskTiming>;
   return {
     clock, shown, view, input, done, period,
     lose: () => (lost = true),
+    rescale: () => (rescaled = true),
     frames: (n: number) => { for (let i = 0; i < n; i++) clock.frame(period); },
     measured: () => measured,
   };
@@ -210,6 +212,7 @@ const interruptions: { given: string; when: (t: ReturnType<typeof setup>) => voi
   { given: "Escape", when: (t) => t.view.key("keydown", "Escape", t.clock.now()), expect: "escape" },
   { given: "lost focus", when: (t) => t.view.dispatchEvent(new Event("blur")), expect: "focus_lost" },
   { given: "a hidden page", when: (t) => ((t.view.document.hidden = true), t.view.document.dispatchEvent(new Event("visibilitychange"))), expect: "hidden" },
+  { given: "another pixel ratio", when: (t) => (t.rescale(), t.clock.frame(16)), expect: "zoomed" },
   { given: "another size", when: (t) => t.input.interrupt("resized"), expect: "resized" },
 ];
 

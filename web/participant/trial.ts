@@ -23,6 +23,8 @@ export interface Stage {
   frame(n: number): DisplayList;
   draw(list: DisplayList | null): void;
   lost(): boolean;
+  /** Whether pixels are no longer those of the calibration. */
+  rescaled(): boolean;
   /** Shows the response buttons once answers count. */
   awaitAnswer(show: boolean): void;
 }
@@ -102,6 +104,7 @@ class Runner {
   private onFrame(stamp: number): void {
     if (this.ended) return;
     if (this.stage.lost()) return this.interrupt("context_lost");
+    if (this.stage.rescaled()) return this.interrupt("zoomed");
     const now = frameTime(stamp, this.stage.clock.now(), this.plan.refresh_ms);
     if (now - this.last < 0.5 * this.plan.refresh_ms) {
       // A second frame in one refresh, as browsers give after a hold-up: what was drawn last stands.
