@@ -30,6 +30,7 @@ type nodeTask struct {
 	Group   int               `json:"group"`
 	Order   int               `json:"order"`
 	Repeat  int               `json:"repeat"`
+	Weigh   int               `json:"weigh"`
 	Records []json.RawMessage `json:"records"`
 }
 
@@ -41,6 +42,8 @@ type nodeLine struct {
 	Times    []float64
 	Dots     int
 	Same     bool
+	Memory   int // bytes
+	Heap     int
 }
 
 // inNode runs the participant's class Engine in Node's JavaScript engine, the
@@ -68,7 +71,7 @@ func inNode(t testing.TB, task nodeTask) []nodeLine {
 		}
 	}
 	var complaint bytes.Buffer
-	command := exec.Command("node", "testdata/host.mjs", filepath.Join(dir, "engine.mjs"), filepath.Join(dir, "engine.wasm"), filepath.Join(dir, "task.json"))
+	command := exec.Command("node", "--expose-gc", "testdata/host.mjs", filepath.Join(dir, "engine.mjs"), filepath.Join(dir, "engine.wasm"), filepath.Join(dir, "task.json"))
 	command.Stderr = &complaint
 	out, err := command.Output()
 	if err != nil {
@@ -224,6 +227,31 @@ func TestViewsStay(t *testing.T) {
 	lines := inNode(t, nodeTask{Study: string(text), Seed: "0000000000000007", Repeat: 50, Records: recordTexts(t, records)})
 	if last := lines[len(lines)-1]; !last.Same || last.Dots < 1000 || len(last.Times) != 50 {
 		t.Errorf("%d dots, the same view: %v", last.Dots, last.Same)
+	}
+}
+
+// A run as long as an hour of trials needs no more memory at its end than after
+// a sixth of it, neither in the module nor in the script.
+func TestMemoryStaysFlat(t *testing.T) {
+	t.Parallel()
+	s, _ := canonicalStudy(t, "motion-coherence")
+	s.Procedures[0].MaxTrials = 1200 // of 3 s each
+	text, err := value.Canonical(s.Encode())
+	if err != nil {
+		t.Fatal(err)
+	}
+	records, err := rehearsal.Observe(s, run.Assignment{Seed: 3}, observerFor("motion-coherence"), rehearsal.DefaultScreen(), "d", 1.7e12)
+	if err != nil {
+		t.Fatal(err)
+	}
+	lines := inNode(t, nodeTask{Study: string(text), Seed: "0000000000000003", Weigh: 200, Records: recordTexts(t, records)})
+	if len(lines) < 6 || len(records) < 1200 {
+		t.Fatalf("%d weighings of %d records", len(lines), len(records))
+	}
+	first, last := lines[0], lines[len(lines)-1]
+	t.Logf("%d records: module %d kB, then %d kB; script %d kB, then %d kB", len(records), first.Memory/1000, last.Memory/1000, first.Heap/1000, last.Heap/1000)
+	if last.Memory != first.Memory || last.Heap > first.Heap+first.Heap/20 {
+		t.Errorf("the memory grows: %+v", lines)
 	}
 }
 

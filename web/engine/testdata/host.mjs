@@ -2,12 +2,13 @@
 // engine.ts, the module, and a task file:
 //
 //   {"study": canonical text, "seed": hex, "group", "order", "repeat": n,
-//    "records": [record, ...]}
+//    "weigh": n, "records": [record, ...]}
 //
 // It writes one line for each record: the step before it and, for trials, a
 // checksum over every word of every list, the batches included, and the record
 // that finishTrial gives. With "repeat" it then shows n more frames of the next
-// trial and writes their times in ms.
+// trial and writes their times in ms. With "weigh" it writes, after every n
+// records and at the end, the bytes of the module's memory and of the script's heap.
 import { readFileSync } from "node:fs";
 import { pathToFileURL } from "node:url";
 
@@ -73,19 +74,27 @@ function trial(record) {
   return engine.finishTrial({ response, rt_ms, input, onset_ms, offset_ms, frame_steps: steps, intervals_ms, interrupted });
 }
 
-for (const record of work.records) {
+function weigh() {
+  globalThis.gc();
+  say({ memory: engine.fixation().dots.buffer.byteLength, heap: process.memoryUsage().heapUsed });
+}
+
+for (const [i, record] of work.records.entries()) {
+  if (work.weigh > 0 && i > 0 && i % work.weigh === 0) weigh();
   const step = engine.next();
   if (record.kind !== "trial") {
     refused("a measurement without a trial", () => engine.finishTrial({
       response: null, rt_ms: null, input: "", onset_ms: null, offset_ms: null, frame_steps: [], intervals_ms: [], interrupted: "",
     }));
-    say({ step });
+    if (!work.weigh) say({ step });
   } else {
     const finished = trial(record);
-    say({ step, sum, finished });
+    if (!work.weigh) say({ step, sum, finished });
   }
   engine.apply(record);
 }
+
+if (work.weigh > 0) weigh();
 
 if (work.repeat > 0) {
   engine.beginTrial();
