@@ -22,6 +22,7 @@ import (
 func TestDisturbedTrials(t *testing.T) {
 	l, _, address := startPages(t, func(s *study.Study) {
 		s.Tasks[0].FixationMs, s.Tasks[0].FixationJitterMs, s.Tasks[0].StimulusMs = 200, 0, 1500
+		s.Screen.Distance, s.Screen.StatedDistanceMm = study.StatedDistance, 570
 		s.Blocks[0].Practice.Correct, s.Blocks[0].Practice.MaxTrials = 0, 1
 	})
 	w := newWalker(t, l, address)
