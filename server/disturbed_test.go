@@ -21,7 +21,7 @@ import (
 // that is asked again, and is in the record.
 func TestDisturbedTrials(t *testing.T) {
 	l, _, address := startPages(t, func(s *study.Study) {
-		s.Tasks[0].FixationMs, s.Tasks[0].FixationJitterMs, s.Tasks[0].StimulusMs = 200, 0, 1500
+		s.Tasks[0].FixationMs, s.Tasks[0].FixationJitterMs, s.Tasks[0].StimulusMs = 200, 0, 2500
 		s.Screen.Distance, s.Screen.StatedDistanceMm = study.StatedDistance, 570
 		s.Blocks[0].Practice.Correct, s.Blocks[0].Practice.MaxTrials = 0, 1
 	})
@@ -49,6 +49,9 @@ func TestDisturbedTrials(t *testing.T) {
 	}
 	for number, trouble := range troubles {
 		w.untilRunning(number)
+		if number == 0 {
+			w.picture("trial")
+		}
 		w.do(trouble.cause)
 		if trouble.end != nil {
 			w.do(chromedp.Sleep(100*time.Millisecond), trouble.end)
@@ -70,7 +73,7 @@ func TestDisturbedTrials(t *testing.T) {
 	w.do(script(`(() => { const now = Date.now; Date.now = () => now() - 3_600_000; })()`))
 	w.trial(number)
 	last := w.stored(number + 1)[number]
-	if last.Interrupted != "" || last.Response == "" || last.ResponseMs < 1500 || last.ResponseMs > 20000 {
+	if last.Interrupted != "" || last.Response == "" || last.ResponseMs < 2500 || last.ResponseMs > 20000 {
 		t.Errorf("after the clock was set: %q, response %q after %g ms", last.Interrupted, last.Response, last.ResponseMs)
 	}
 	for range 200 {

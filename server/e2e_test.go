@@ -354,10 +354,6 @@ func (p *participant) measure() {
 			var number int
 			var phase string
 			fmt.Sscanf(where, "trial %d %s", &number, &phase)
-			if phase == "running" && number == last+1 && number == 3 {
-				time.Sleep(700 * time.Millisecond)
-				p.picture("trial")
-			}
 			if phase != "answer" || number == last {
 				break
 			}
