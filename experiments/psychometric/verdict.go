@@ -80,6 +80,13 @@ func (r *Result) judge(p *problem, s *summit, wanted profiling) {
 	n, k := p.totals()
 	evidence := 2 * (s.value - s.constant)
 	switch {
+	case r.Model.Symmetric && (k == n || k == 0):
+		r.Status = AllWrong
+		which := "the other one"
+		if k == n {
+			r.Status, which = AllCorrect, "the one counted"
+		}
+		r.Explanation = "Every response was the same, " + which + ". The point of balance lies beyond the levels tested: " + r.limits() + " Test levels on its other side."
 	case k == n:
 		r.Status = AllCorrect
 		r.Explanation = "Every response was correct. The threshold is easier than the levels tested: " + r.limits() + " Test harder levels."

@@ -230,12 +230,14 @@ func (s *Service) fillRuns(c echo.Context, w who, st store.Study, spec *study.St
 			row.Thresholds = append(row.Thresholds, thresholdText(t))
 			g := groups[name]
 			if g == nil {
-				g = &pages.ThresholdPlot{Name: name, Parameter: t.Parameter, Unit: t.Unit}
+				g = &pages.ThresholdPlot{Name: name, Parameter: t.Parameter, Unit: t.Unit, Linear: t.Linear}
 				groups[name] = g
 				order = append(order, name)
 			}
 			if t.Known && r.Outcome == store.OutcomeCompleted {
-				g.Add(row.ID, t.Threshold, t.Low, t.High, r.Excluded, r.Simulated)
+				g.Add(pages.ThresholdItem{
+					Run: row.ID, Value: t.Threshold, Low: t.Low, High: t.High, OnScale: t.Fit.OnScale.Value, SE: t.Fit.OnScale.SE, Excluded: r.Excluded, Simulated: r.Simulated,
+				})
 			}
 		}
 		m.Runs = append(m.Runs, row)
@@ -361,7 +363,12 @@ func (s *Service) run(c echo.Context, w who) error {
 }
 
 func psychometricPlot(t quality.Threshold) pages.RunPlot {
-	p := pages.RunPlot{Name: t.Block, Parameter: t.Parameter, Unit: t.Unit, Levels: t.Levels, Correct: t.Correct, Text: thresholdText(t), Note: t.Explanation}
+	p := pages.RunPlot{Name: t.Block, Parameter: t.Parameter, Unit: t.Unit, Levels: t.Levels, Correct: t.Correct, Text: thresholdText(t), Note: t.Explanation,
+		Linear: t.Linear, Known: t.Known, Fitted: t.Function, YLabel: "proportion correct", Marks: "filled right, open wrong", Caption: "Threshold",
+	}
+	if t.Counted != "" {
+		p.YLabel, p.Marks, p.Caption = "proportion of “"+t.Counted+"”", "filled “"+t.Counted+"”", "Point of balance"
+	}
 	if t.Condition != "" {
 		p.Name = t.Condition
 	}

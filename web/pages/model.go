@@ -92,6 +92,9 @@ type Point struct {
 // RunPlot is a run's track of levels and its psychometric function.
 type RunPlot struct {
 	Name, Parameter, Unit, Text, Note string
+	Caption, Fitted, YLabel, Marks    string // what was fitted, and what filled points are
+	Linear                            bool   // scale of the levels
+	Known                             bool   // Threshold, Low and High mean something
 	Levels                            []float64
 	Correct                           []bool
 	Points                            []Point

@@ -1,12 +1,15 @@
 package pages
 
 import (
+	"cmp"
 	"fmt"
 	"math"
 	"slices"
 	"strings"
 
 	"github.com/a-h/templ"
+
+	"distal/experiments/psychometric"
 )
 
 // plot draws into an SVG with hairline axes and direct labels. Colours and
@@ -35,6 +38,14 @@ func (a axis) at(v float64) float64 {
 		share = (v - low) / (high - low)
 	}
 	return a.from + math.Max(-0.02, math.Min(1.02, share))*(a.to-a.from)
+}
+
+// share is the value at a share of the axis.
+func (a axis) share(s float64) float64 {
+	if a.log {
+		return a.low * math.Pow(a.high/a.low, s)
+	}
+	return a.low + s*(a.high-a.low)
 }
 
 // ticks are round values within the axis.
@@ -119,37 +130,57 @@ func withUnit(name, unit string) string {
 // ThresholdPlot collects the thresholds of a study's runs in one condition.
 type ThresholdPlot struct {
 	Name, Parameter, Unit string
-	items                 []thresholdItem
+	Linear                bool // scale of the levels
+	items                 []ThresholdItem
 }
 
-type thresholdItem struct {
-	run                 string
-	value, low, high    float64
-	excluded, simulated bool
+// ThresholdItem is a run's threshold with its interval; OnScale and SE are the
+// threshold and its standard error on the scale, in log10 units unless the scale is linear.
+type ThresholdItem struct {
+	Run                 string
+	Value, Low, High    float64
+	OnScale, SE         float64
+	Excluded, Simulated bool
 }
 
-// Add adds a run's threshold with its interval.
-func (t *ThresholdPlot) Add(run string, value, low, high float64, excluded, simulated bool) {
-	t.items = append(t.items, thresholdItem{run, value, low, high, excluded, simulated})
+// Add adds a run's threshold.
+func (t *ThresholdPlot) Add(item ThresholdItem) { t.items = append(t.items, item) }
+
+// Mean says in words what the runs that are not excluded have in common: the
+// random-effects mean of their thresholds with its 95 % interval. ok is false for
+// fewer than two.
+func (t ThresholdPlot) Mean() (text string, mean float64, ok bool) {
+	var y, se []float64
+	for _, i := range t.items {
+		if !i.Excluded {
+			y, se = append(y, i.OnScale), append(se, i.SE)
+		}
+	}
+	g, err := psychometric.SummariseGroup(y, se, 0)
+	if err != nil {
+		return "", 0, false
+	}
+	unit := func(x float64) float64 { return x }
+	between := fmt.Sprintf("standard deviation between runs %s", short(g.Tau))
+	if !t.Linear {
+		unit = func(x float64) float64 { return math.Pow(10, x) }
+		between = fmt.Sprintf("runs differ by a factor of %s (one standard deviation)", short(unit(g.Tau)))
+	}
+	m := g.Mean
+	return fmt.Sprintf("Mean of %d runs %s [%s, %s]; %s. Random-effects model on the %s scale.",
+		g.Count, short(unit(m.Value)), short(unit(m.Interval.Low)), short(unit(m.Interval.High)), between, map[bool]string{true: "linear", false: "log"}[t.Linear]), unit(m.Value), true
 }
 
 // Draw draws the runs in order of their thresholds, each with its interval;
-// the line is the geometric mean of those that are not excluded.
+// the line is the mean of those that are not excluded.
 func (t ThresholdPlot) Draw() templ.Component {
 	if len(t.items) == 0 {
 		return templ.Raw(`<p class="quiet">No finished run has a threshold yet.</p>`)
 	}
 	items := slices.Clone(t.items)
-	slices.SortFunc(items, func(a, b thresholdItem) int { return int(math.Copysign(1, a.value-b.value)) })
-	low, high, sum, n := math.Inf(1), math.Inf(-1), 0.0, 0.0
-	for _, i := range items {
-		low, high = math.Min(low, i.value/2), math.Max(high, i.value*2)
-		if !i.excluded {
-			sum += math.Log(i.value)
-			n++
-		}
-	}
-	p := newPlot(560, 250, axis{low: 0, high: float64(len(items) + 1)}, axis{low: low, high: high, log: true})
+	slices.SortFunc(items, func(a, b ThresholdItem) int { return cmp.Compare(a.Value, b.Value) })
+	y := levelAxis(t.Linear, 2, items[0].Value, items[len(items)-1].Value)
+	p := newPlot(560, 250, axis{low: 0, high: float64(len(items) + 1)}, y)
 	p.printf(`<path class="axis" d="M%.1f %.1fV%.1fH%.1f"/>`, p.left, p.top, p.height-p.bottom, p.width-p.right)
 	for _, v := range p.y.ticks() {
 		at := p.y.at(v)
@@ -157,38 +188,50 @@ func (t ThresholdPlot) Draw() templ.Component {
 	}
 	p.printf(`<text class="label" x="%.1f" y="%.1f" text-anchor="middle">runs, by threshold</text>`, p.width/2, p.height-14)
 	p.printf(`<text class="label" transform="translate(13 %.1f) rotate(-90)" text-anchor="middle">%s</text>`, (p.top+p.height-p.bottom)/2, escape(withUnit(t.Parameter, t.Unit)))
-	if n > 0 {
-		mean := math.Exp(sum / n)
-		p.printf(`<path class="mean" d="M%.1f %.1fH%.1f"/><text class="tick" x="%.1f" y="%.1f">geometric mean %s</text>`,
+	if _, mean, ok := t.Mean(); ok {
+		p.printf(`<path class="mean" d="M%.1f %.1fH%.1f"/><text class="tick" x="%.1f" y="%.1f">mean %s</text>`,
 			p.left, p.y.at(mean), p.width-p.right, p.left+6, p.y.at(mean)-5, short(mean))
 	}
 	for k, i := range items {
 		class := "point"
-		if i.excluded {
+		if i.Excluded {
 			class = "point out"
 		}
 		kind := "human"
-		if i.simulated {
+		if i.Simulated {
 			class += " simulated"
 			kind = "simulated"
 		}
 		x := p.x.at(float64(k + 1))
 		p.printf(`<a href="/runs/%s" aria-label="%s run, threshold %s"><path class="bar" d="M%.1f %.1fV%.1f"/><circle class="%s" cx="%.1f" cy="%.1f" r="4"/></a>`,
-			i.run, kind, short(i.value), x, p.y.at(math.Max(i.low, low*0.5)), p.y.at(math.Min(i.high, high*2)), class, x, p.y.at(i.value))
+			i.Run, kind, short(i.Value), x, p.y.at(math.Max(i.Low, y.low)), p.y.at(math.Min(i.High, y.high)), class, x, p.y.at(i.Value))
 	}
 	return p.svgAs("group", fmt.Sprintf("Thresholds of %d runs, %s", len(items), t.Name))
 }
 
-// Trace draws the levels of the trials, right ones filled, wrong ones open.
+// levelAxis spans levels with room around them: a factor on a log scale, as much
+// of the span on a linear one.
+func levelAxis(linear bool, room, low, high float64) axis {
+	if !linear && low > 0 {
+		return axis{low: low / room, high: high * room, log: true}
+	}
+	margin := math.Max((room-1)*(high-low), 1e-3*math.Max(math.Abs(low), math.Abs(high)))
+	if margin == 0 {
+		margin = 1
+	}
+	return axis{low: low - margin, high: high + margin}
+}
+
+// Trace draws the levels of the trials: filled are those right or answered as counted.
 func (r RunPlot) Trace() templ.Component {
 	if len(r.Levels) == 0 {
 		return templ.Raw(`<p class="quiet">There are no trials yet.</p>`)
 	}
 	low, high := slices.Min(r.Levels), slices.Max(r.Levels)
-	p := newPlot(560, 240, axis{low: 0, high: float64(len(r.Levels) + 1)}, axis{low: low / 1.15, high: high * 1.15, log: true})
-	if r.Threshold > 0 {
+	p := newPlot(560, 240, axis{low: 0, high: float64(len(r.Levels) + 1)}, levelAxis(r.Linear, 1.15, low, high))
+	if r.Known {
 		p.printf(`<path class="mean" d="M%.1f %.1fH%.1f"/>`, p.left, p.y.at(r.Threshold), p.width-p.right)
-		p.printf(`<text class="tick" x="%.1f" y="%.1f" text-anchor="end">threshold</text>`, p.width-p.right, p.y.at(r.Threshold)-5)
+		p.printf(`<text class="tick" x="%.1f" y="%.1f" text-anchor="end">%s</text>`, p.width-p.right, p.y.at(r.Threshold)-5, strings.ToLower(r.Caption))
 	}
 	p.axes("trial", withUnit(r.Parameter, r.Unit))
 	var path strings.Builder
@@ -207,7 +250,7 @@ func (r RunPlot) Trace() templ.Component {
 		}
 		p.printf(`<circle class="%s" cx="%.1f" cy="%.1f" r="3"/>`, class, p.x.at(float64(i+1)), p.y.at(level))
 	}
-	return p.svg("Levels of the trials, " + r.Name + ": filled right, open wrong")
+	return p.svg("Levels of the trials, " + r.Name + ": " + r.Marks)
 }
 
 // Function draws the fitted psychometric function with its data; the area of a
@@ -220,24 +263,21 @@ func (r RunPlot) Function() templ.Component {
 	for _, point := range r.Points {
 		low, high = math.Min(low, point.X), math.Max(high, point.X)
 	}
-	p := newPlot(560, 260, axis{low: low / 1.2, high: high * 1.2, log: true}, axis{low: 0, high: 1})
-	p.axes(withUnit(r.Parameter, r.Unit), "proportion correct")
-	if r.Threshold > 0 {
-		to := r.High
-		if math.IsInf(to, 1) {
-			to = high * 1.2
-		}
-		from := math.Max(r.Low, low/1.2)
+	x := levelAxis(r.Linear, 1.2, low, high)
+	p := newPlot(560, 260, x, axis{low: 0, high: 1})
+	p.axes(withUnit(r.Parameter, r.Unit), r.YLabel)
+	if r.Known {
+		from, to := math.Max(r.Low, x.low), math.Min(r.High, x.high)
 		p.printf(`<path class="interval" d="M%.1f %.1fH%.1f"/>`, p.x.at(from), p.y.at(0.03), p.x.at(to))
-		p.printf(`<path class="mean" d="M%.1f %.1fV%.1f"/><text class="tick" x="%.1f" y="%.1f">threshold %s, 95 %% interval</text>`,
-			p.x.at(r.Threshold), p.y.at(0), p.y.at(1), p.x.at(r.Threshold)+6, p.y.at(0.07), short(r.Threshold))
+		p.printf(`<path class="mean" d="M%.1f %.1fV%.1f"/><text class="tick" x="%.1f" y="%.1f">%s %s, 95 %% interval</text>`,
+			p.x.at(r.Threshold), p.y.at(0), p.y.at(1), p.x.at(r.Threshold)+6, p.y.at(0.07), strings.ToLower(r.Caption), short(r.Threshold))
 	}
 	if r.Predict != nil {
 		var path strings.Builder
 		const n = 160
 		for i := range n + 1 {
-			x := math.Pow(10, math.Log10(low/1.2)+float64(i)/n*(math.Log10(high*1.2)-math.Log10(low/1.2)))
-			y := r.Predict(x)
+			at := x.share(float64(i) / n)
+			y := r.Predict(at)
 			if math.IsNaN(y) {
 				continue
 			}
@@ -245,12 +285,12 @@ func (r RunPlot) Function() templ.Component {
 			if path.Len() == 0 {
 				command = "M"
 			}
-			fmt.Fprintf(&path, "%s%.1f %.1f", command, p.x.at(x), p.y.at(y))
+			fmt.Fprintf(&path, "%s%.1f %.1f", command, p.x.at(at), p.y.at(y))
 		}
 		p.printf(`<path class="curve" d="%s"/>`, path.String())
 	}
 	for _, point := range r.Points {
-		p.printf(`<circle class="point" cx="%.1f" cy="%.1f" r="%.1f"><title>%d of %d right at %s</title></circle>`,
+		p.printf(`<circle class="point" cx="%.1f" cy="%.1f" r="%.1f"><title>%d of %d at %s</title></circle>`,
 			p.x.at(point.X), p.y.at(float64(point.K)/float64(point.N)), 1.5+1.3*math.Sqrt(float64(point.N)), point.K, point.N, short(point.X))
 	}
 	return p.svg("Psychometric function, " + r.Name)
