@@ -97,6 +97,26 @@ func (a *adaptation) Begin(t Trial) {
 	}
 }
 
+// Change implements Changer: speed and contrast of the test, to null the
+// after-effect. A grating keeps its phase.
+func (a *adaptation) Change(i int, x float64) bool {
+	switch i {
+	case adaptationTestSpeed:
+		if a.testing() && a.v.Choice(adaptationTest) == testDrift {
+			perFrame := a.v.Num(adaptationFrequency) * a.interval / 1000
+			a.turns += float64(float64((x-a.v.Num(i))*perFrame) * float64(a.frame-a.adaptEnd-a.gap))
+		}
+	case adaptationTestContrast:
+	default:
+		return false
+	}
+	a.v[i][0] = x
+	if a.v.Choice(adaptationPattern) == patternDots {
+		a.steer()
+	}
+	return true
+}
+
 // adapting, and after the pause testing, tell in which part the frame is.
 func (a *adaptation) adapting() bool { return a.frame < a.adaptEnd }
 func (a *adaptation) testing() bool  { return a.frame >= a.adaptEnd+a.gap }

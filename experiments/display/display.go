@@ -30,6 +30,14 @@ type Display interface {
 	Truths(add func(name string, value float64))
 }
 
+// A Changer is a Display of which some parameters can change while it is shown,
+// without a jump: what was at a place stays there and goes on in the new way.
+type Changer interface {
+	// Change sets number parameter i from the next step on. It may keep x in the
+	// values that Begin got. false: this parameter cannot change; nothing happened.
+	Change(i int, x float64) bool
+}
+
 // Trial is what a display needs to know about one trial.
 type Trial struct {
 	Values     Values

@@ -121,6 +121,7 @@ type dots struct {
 
 	centreX, centreY float64
 	step             float64 // degrees a dot moves when its set is shown
+	interval         float64
 	frame            int
 	lifetime         int // in updates of a set, 0: unlimited
 	signalShown      int
@@ -161,8 +162,8 @@ func (d *dots) Begin(t Trial) {
 	d.life = random.NewSub(t.Seed, t.Number, random.PurposeLifetime, t.Place)
 	d.polarity = random.NewSub(t.Seed, t.Number, random.PurposePolarity, t.Place)
 
-	d.step = float64(d.v.Num(dotsSpeed) * t.IntervalMs / 1000 * float64(d.sets))
-	d.dirSin, d.dirCos = exact.SinCos(exact.Radians(d.v.Num(dotsDirection)))
+	d.interval = t.IntervalMs
+	d.steer()
 	d.frame = 0
 	d.lifetime = 0
 	if ms := d.v.Num(dotsLifetime); ms > 0 {
@@ -183,6 +184,33 @@ func (d *dots) Begin(t Trial) {
 		d.aim(i)
 	}
 	d.signalShown = d.countSignal(0)
+}
+
+// steer takes speed and direction from the values.
+func (d *dots) steer() {
+	d.step = float64(d.v.Num(dotsSpeed) * d.interval / 1000 * float64(d.sets))
+	d.dirSin, d.dirCos = exact.SinCos(exact.Radians(d.v.Num(dotsDirection)))
+}
+
+// Change implements Changer. With another coherence the signal dots are drawn anew.
+func (d *dots) Change(i int, x float64) bool {
+	switch i {
+	case dotsCoherence, dotsSpeed, dotsContrast, dotsDiameter:
+	case dotsDirection:
+		if d.v.Num(dotsBandwidth) > 0 { // each dot has a direction of its own for life
+			return false
+		}
+	default:
+		return false
+	}
+	d.v[i][0] = x
+	d.steer()
+	if i == dotsCoherence {
+		for s := range d.sets {
+			d.drawSignal(s)
+		}
+	}
+	return true
 }
 
 // drawSign gives half of the dots each polarity when they are mixed.

@@ -91,8 +91,13 @@ func (g *grating) Begin(t Trial) {
 	g.v, g.interval, g.frame = t.Values, t.IntervalMs, 0
 	g.hold = holdFrames(g.v.Num(gratingSample), t.IntervalMs)
 	g.turns = onsetTurns(g.v.Num(gratingPhase), t)
+	g.draw(t.XDeg, t.YDeg)
+}
+
+// draw makes the patch of the values.
+func (g *grating) draw(x, y float64) {
 	g.patch = Patch{
-		XDeg: float32(t.XDeg), YDeg: float32(t.YDeg),
+		XDeg: float32(x), YDeg: float32(y),
 		WidthDeg: float32(g.v.Num(gratingWidth)), HeightDeg: float32(g.v.Num(gratingHeight)),
 		OrientationDeg:      float32(g.v.Num(gratingDirection)),
 		SpatialFrequencyCPD: float32(g.v.Num(gratingFrequency)),
@@ -102,6 +107,28 @@ func (g *grating) Begin(t Trial) {
 		Window:              float32(g.v.Choice(gratingWindow)),
 		Mode:                PatchAdd,
 	}
+}
+
+// Change implements Changer. Another temporal frequency keeps the phase of a drift.
+func (g *grating) Change(i int, x float64) bool {
+	switch i {
+	case gratingTemporal:
+		if g.v.Choice(gratingMotion) == motionCounterphase {
+			return false
+		}
+		g.turns += g.moved(x) - g.moved(g.v.Num(i))
+	case gratingDirection, gratingFrequency, gratingContrast:
+	default:
+		return false
+	}
+	g.v[i][0] = x
+	g.draw(float64(g.patch.XDeg), float64(g.patch.YDeg))
+	return true
+}
+
+// moved is how many periods a temporal frequency has taken the pattern.
+func (g *grating) moved(hz float64) float64 {
+	return float64(hz * (float64(g.frame/g.hold*g.hold) * g.interval / 1000))
 }
 
 // holdFrames is how many refresh intervals a step of so many ms lasts, at least one.
@@ -126,7 +153,7 @@ func radiansOfTurns(turns float64) float32 {
 func (g *grating) Step(n int, l *List) {
 	g.frame += n
 	step := g.frame / g.hold
-	moved := float64(g.v.Num(gratingTemporal) * (float64(step*g.hold) * g.interval / 1000))
+	moved := g.moved(g.v.Num(gratingTemporal))
 	p := g.patch
 	if g.v.Choice(gratingMotion) == motionCounterphase {
 		p.PhaseRad = radiansOfTurns(g.turns)

@@ -99,6 +99,16 @@ func (d *induced) Begin(t Trial) {
 	}
 }
 
+// Change implements Changer: the target's velocity, to null the motion induced,
+// and both contrasts.
+func (d *induced) Change(i int, x float64) bool {
+	if i != inducedTarget && i != inducedTargetContrast && i != inducedInducerContrast {
+		return false
+	}
+	d.v[i][0] = x
+	return true
+}
+
 // travelled is how far something of that speed is along its path.
 func (d *induced) travelled(speed float64, frame int) float64 {
 	seconds := float64(frame) * d.interval / 1000

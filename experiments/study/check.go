@@ -165,6 +165,9 @@ func (c *checker) displays() {
 		if d := c.s.Tasks[i].Display; d >= 0 && d < len(used) {
 			used[d] = true
 		}
+		for _, d := range c.s.Tasks[i].Beside {
+			used[d] = true
+		}
 	}
 	for i := range c.s.Displays {
 		d := &c.s.Displays[i]
@@ -229,9 +232,7 @@ func (c *checker) task(t *Task) {
 	if t.ResponseWindowMs > 0 && t.ResponseWindowMs < t.StimulusMs && !t.RespondDuring {
 		c.fail("the response window ends before the stimulus does, so nobody can answer: make it longer than stimulus_ms or set respond_during", "tasks", t.Name, "response_window_ms")
 	}
-	if len(t.Choices) < 2 {
-		c.fail("at least two choices are needed", "tasks", t.Name, "choices")
-	}
+	c.answering(t)
 	taken := map[string]string{"Escape": "stopping a display"}
 	for i := range t.Choices {
 		ch := &t.Choices[i]

@@ -66,6 +66,7 @@ func (c *checker) block(i int, b *Block) {
 		c.blockProcedure(b, d, task)
 	}
 	c.decidedOnce(i, b)
+	c.judged(i, b, task)
 	if !c.broken("tasks."+task.Name) && !c.broken("displays."+d.Name) {
 		c.combinations(i, b, d, task)
 	}
@@ -236,6 +237,16 @@ func (c *checker) trial(i int, d *DisplaySpec, task *Task, name string, crossing
 			how = "more than one choice is right"
 		}
 		c.fail(describe(name, crossing, d)+how+": look at right_when of task "+task.Name, "blocks", i, "balance")
+	}
+	if task.Intervals.Design != OneInterval && c.shows(d) {
+		reference := values.Clone()
+		for _, s := range task.Intervals.Reference {
+			reference[d.Kind.Index(s.Key)][0] = s.Value
+		}
+		c.possible(d, reference, func(_, message string) {
+			fine = false
+			c.fail(describe(name, crossing, d)+"the reference: "+message, "tasks", task.Name, "intervals", "reference")
+		})
 	}
 	if c.shows(d) {
 		c.possible(d, values, func(key, message string) {

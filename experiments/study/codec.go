@@ -322,6 +322,14 @@ func (c *codec) items(key string, v value.Value) []value.Value {
 	return []value.Value{v}
 }
 
+// rare walks what is written only where it is not as usual: studies from before
+// there was such a key keep their canonical form.
+func (c *codec) rare(usual bool, walk func()) {
+	if c.mode != writing || !usual {
+		walk()
+	}
+}
+
 // sub opens the mapping v under key for reading.
 func (c *codec) sub(path, key string, keyPos value.Pos, v value.Value) *codec {
 	return &codec{mode: c.mode, in: v, path: path, key: key, keyPos: keyPos, problems: c.problems, language: c.language}

@@ -137,6 +137,10 @@ type Task struct {
 	Choices          []Choice // response alternatives
 	Feedback         Feedback
 	Prompt           []LocalText
+	Beside           []int      // displays shown at the same time, with the values of the study
+	Intervals        Intervals  // more than one presentation
+	Answer           Answer     // other than by choice
+	Confidence       Confidence // asked after the answer
 }
 
 // FixationMark is the mark that participants look at.
@@ -154,6 +158,7 @@ type Choice struct {
 	Keys    []string // KeyboardEvent.code values, e.g. ArrowLeft
 	Label   []LocalText
 	Correct []Setting // e.g. direction_deg: 180
+	Means   Meaning   // what it says about the intervals
 }
 
 // Setting is a display parameter with a value.

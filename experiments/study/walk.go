@@ -398,11 +398,15 @@ func walkTask(c *codec, t *Task, s *Study) {
 	if t.Display >= 0 && t.Display < len(s.Displays) {
 		d = &s.Displays[t.Display]
 	}
-	named(c, "choices", &t.Choices, func(ch *Choice) *string { return &ch.Name }, true, "the response alternatives",
+	walkAnswering(c, t, s, d)
+	named(c, "choices", &t.Choices, func(ch *Choice) *string { return &ch.Name }, c.mode == reading && t.Answer.By == ByChoice, "the response alternatives",
 		func(c *codec, ch *Choice) {
 			c.words("keys", &ch.Keys, nil, "KeyboardEvent code values, e.g. ArrowLeft, KeyF, Space")
 			c.sentence("label", &ch.Label, true, "what the button says")
 			c.settings("right_when", &ch.Correct, d, "display parameter values for which this is the right answer")
+			c.rare(ch.Means == NoMeaning, func() {
+				oneOf(c, "means", &ch.Means, MeaningNames, NoMeaning, false, "what the answer says about the intervals, and so when it is right")
+			})
 		})
 	oneOf(c, "feedback", &t.Feedback, FeedbackNames, PracticeOnly, false, "right or wrong after the response")
 	c.sentence("prompt", &t.Prompt, false, "the question under the display, e.g. Which way did most dots move?")
