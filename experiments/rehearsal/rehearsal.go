@@ -210,7 +210,9 @@ func (w *walk) trial(p *run.TrialPlan) *run.TrialRecord {
 	task := &w.study.Tasks[p.Task]
 	m := run.Measurement{Input: "keyboard"}
 	m.Steps, m.IntervalsMs = w.present(p)
-	if !w.screen.SkipDisplays {
+	if m.Given = w.given(p, task, &m); m.Given != nil && !w.screen.SkipDisplays {
+		w.run.Redraw(&run.TrialRecord{Steps: m.Steps, Given: m.Given})
+	} else if !w.screen.SkipDisplays {
 		w.run.BeginTrial()
 		for i := range m.Steps {
 			w.run.Frame(m.Steps[max(i-1, 0)])
@@ -218,7 +220,7 @@ func (w *walk) trial(p *run.TrialPlan) *run.TrialRecord {
 	} else {
 		w.run.BeginTrial()
 	}
-	choice, rt := w.decide(p, len(task.Choices))
+	choice, rt := w.decide(p, max(1, len(task.Choices)))
 	shown := 0.0
 	for _, d := range m.IntervalsMs {
 		shown += d
@@ -229,7 +231,12 @@ func (w *walk) trial(p *run.TrialPlan) *run.TrialRecord {
 	if task.RespondDuring {
 		m.ResponseMs = round2(rt)
 	}
-	m.Response = task.Choices[choice].Name
+	if m.Response = study.Said[task.Answer.By]; m.Response == "" {
+		m.Response = task.Choices[choice].Name
+	}
+	if len(p.Order) > 0 || task.Answer.By == study.ByAdjustment || task.Answer.By == study.ByHolding {
+		m.ResponseMs = round2(rt + shown)
+	}
 	w.clock += float64(p.FixationFrames)*p.RefreshMs + max(m.ResponseMs, shown) + task.IntertrialMs
 	w.trials++
 	return w.run.FinishTrial(m)

@@ -143,7 +143,7 @@ func (b *block) plan(r *Run) *TrialPlan {
 	case p.Track >= 0:
 		p.setLevel(r, spec, b.tracks[p.Track].procedure)
 	}
-	p.CorrectChoice = task.RightChoice(&r.study.Displays[task.Display], p.values)
+	r.present(p, task)
 	return p
 }
 
@@ -153,7 +153,12 @@ func (r *Run) frames(p *TrialPlan, task *study.Task) {
 	fixationMs := task.FixationMs + float64(task.FixationJitterMs*jitter.Float64())
 	p.FixationFrames = visual.Frames(fixationMs, p.RefreshMs)
 	p.StimulusFrames = visual.Frames(task.StimulusMs, p.RefreshMs)
+	p.intervalFrames = p.StimulusFrames
 	p.RampFrames = min(visual.Frames(task.RampMs, p.RefreshMs), p.StimulusFrames/2)
+	if task.Intervals.Design != study.OneInterval {
+		p.gapFrames = visual.Frames(task.Intervals.GapMs, p.RefreshMs)
+		p.StimulusFrames += p.gapFrames + p.intervalFrames
+	}
 }
 
 // drawCatch decides whether the trial is a catch trial: one in Every on
@@ -232,7 +237,7 @@ func (b *block) record(r *Run, p *TrialPlan, t *TrialRecord) {
 		b.postpone(p)
 		return
 	}
-	if t.Response == "" && p.CorrectChoice >= 0 {
+	if t.Response == "" && (p.CorrectChoice >= 0 || r.study.Tasks[p.Task].Answer.By != study.ByChoice) {
 		// Without an answer nothing is known: the same level comes again.
 		b.missedInRow++
 		if b.missedInRow >= 3 {

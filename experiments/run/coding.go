@@ -105,6 +105,10 @@ func (f *fields) trial() *TrialRecord {
 	t.Steps = steps
 	t.Keys, t.Values = f.numberMap("values")
 	t.TruthKeys, t.Truths = f.numberMap("truths")
+	if _, ok := f.v.Get("interval_order"); ok {
+		t.Order = f.text("interval_order")
+	}
+	t.Given = f.given(true)
 	return t
 }
 
@@ -355,6 +359,12 @@ func (o *object) trial(t *TrialRecord) {
 		number("stimulus_frames", float64(t.StimulusSteps)).text("frame_steps", EncodeSteps(t.Steps)).
 		put("intervals_ms", value.Numbers(t.IntervalsMs)).number("dropped_frames", float64(t.Dropped)).
 		number("jitter_ms", t.JitterMs).text("digest", t.Digest).text("interrupted", t.Interrupted)
+	if t.Order != "" {
+		o.text("interval_order", t.Order)
+	}
+	if t.Given != nil {
+		o.put("given", t.Given.encode())
+	}
 }
 
 func (o *object) answers(a *Answers) {

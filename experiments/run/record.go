@@ -135,6 +135,30 @@ type TrialRecord struct {
 	JitterMs      float64   // "jitter_ms"
 	Digest        string    // "digest": 16 hex digits over the display lists of all presented stimulus frames
 	Interrupted   string    // "interrupted": "" or what spoiled the trial (hidden, resized, context_lost, escape, DroppedFrame …); such a trial counts for nothing and is asked again
+
+	Order string // "interval_order": "test reference" and the like where there are two intervals, otherwise "" and not written
+	Given *Given // "given": of answers that are more than a choice, otherwise nil and not written
+}
+
+// Given is what an answer consists of besides a choice. Numbers that do not
+// belong to the task's way of answering are NaN (null), lists empty.
+type Given struct {
+	ResponseDeg float64 // "response_deg": dial: direction, counter-clockwise from rightwards, 0 to 360
+	ErrorDeg    float64 // "error_deg": from the direction that is right, counter-clockwise, above −180 to 180
+	Start       float64 // "start": direction or setting that the participant began with, drawn at random
+	Setting     float64 // "setting": adjustment: what was confirmed, in the parameter's unit
+	HeldMs      float64 // "held_ms": hold: in all
+	FirstHeldMs float64 // "first_held_ms": until it was first let go
+	Confidence  float64 // "confidence": 1 to the task's steps
+	SureMs      float64 // "confidence_rt_ms": from the appearance of the scale
+
+	// Every change of the setting: the number of the presented stimulus frame that
+	// first showed it, what was set, and when (ms from stimulus onset).
+	AdjustFrames []float64 // "adjust_frames"
+	AdjustValues []float64 // "adjust_values"
+	AdjustMs     []float64 // "adjust_ms"
+	HeldFromMs   []float64 // "held_from_ms": from stimulus onset
+	HeldToMs     []float64 // "held_to_ms"
 }
 
 // DroppedFrame stands in TrialRecord.Interrupted where a frame of the stimulus

@@ -338,7 +338,9 @@ func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {
 		return "the values differ"
 	case t.RefreshMs != p.RefreshMs || t.StimulusSteps != p.StimulusFrames || t.FixationSteps != p.FixationFrames:
 		return "the refresh interval or the planned frames differ"
-	case t.Response != "" && choiceIndex(task, t.Response) < 0:
+	case t.Order != orderText(p.Order):
+		return "the order of the intervals differs"
+	case t.Response != "" && choiceIndex(task, t.Response) < 0 && t.Response != study.Said[task.Answer.By]:
 		return "there is no choice " + strconv.Quote(t.Response)
 	case t.Correct != rightness(task, p, t.Response, t.Interrupted):
 		return "right or wrong differs"
@@ -347,7 +349,7 @@ func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {
 	case (t.Interrupted == "" || t.Interrupted == DroppedFrame) && (t.Interrupted != "") != r.block.repeats(&r.study.Blocks[p.Block], t.Dropped):
 		return "whether it is repeated for a dropped frame differs"
 	}
-	return ""
+	return r.compareGiven(p, t)
 }
 
 // choiceIndex is the index of the choice called name, −1 if there is none.

@@ -17,6 +17,11 @@ type stage struct {
 	mark     study.FixationMark
 	frame    int // of the stimulus, in refresh intervals
 	began    bool
+	study    *study.Study
+	seed     uint64
+	interval int            // the presentation that is shown
+	own      display.Values // of a display that is adjusted
+	suffix   string         // of the names of truths
 	hash     uint64
 	keys     []string
 	truths   []float64
@@ -24,16 +29,23 @@ type stage struct {
 }
 
 func (s *stage) open(st *study.Study) {
+	s.study = st
 	s.displays = make([]display.Display, len(st.Displays))
-	dots, patches, batches := 0, 0, 0
 	for i := range st.Displays {
 		s.displays[i] = st.Displays[i].Kind.New(st.Displays[i].Values)
-		d, p, b := s.displays[i].Size()
+	}
+	dots, patches, batches := 0, 0, 0
+	for i := range st.Tasks {
+		d, p, b := s.displays[st.Tasks[i].Display].Size()
+		for _, k := range st.Tasks[i].Beside {
+			d1, p1, b1 := s.displays[k].Size()
+			d, p, b = d+d1, p+p1, b+b1
+		}
 		dots, patches, batches = max(dots, d), max(patches, p), max(batches, b)
 	}
 	s.list = display.NewList(dots+1, patches, batches+1)
 	s.add = func(name string, x float64) {
-		s.keys, s.truths = append(s.keys, name), append(s.truths, x)
+		s.keys, s.truths = append(s.keys, name+s.suffix), append(s.truths, x)
 	}
 }
 
@@ -43,20 +55,86 @@ func (r *Run) BeginTrial() bool {
 	if step.Kind != StepTrial {
 		return false
 	}
-	r.show.begin(r.study, r.assignment.Seed, step.Trial)
+	r.show.seed = r.assignment.Seed
+	r.show.begin(step.Trial)
 	return true
 }
 
-func (s *stage) begin(st *study.Study, seed uint64, p *TrialPlan) {
-	spec := &st.Displays[p.Display]
+func (s *stage) begin(p *TrialPlan) {
+	task := &s.study.Tasks[p.Task]
 	s.plan, s.frame, s.began = p, 0, false
-	s.mark = st.Tasks[p.Task].FixationMark
+	s.mark = task.FixationMark
 	s.hash = offset64
 	s.keys, s.truths = nil, nil
-	s.displays[p.Display].Begin(display.Trial{
-		Values: p.values, Seed: seed, Number: uint32(p.Number), IntervalMs: p.RefreshMs, XDeg: spec.XDeg, YDeg: spec.YDeg,
+	s.own = p.values
+	if task.Answer.By == study.ByAdjustment {
+		s.own = p.values.Clone()
+		s.own[s.adjusted()][0] = p.Start
+	}
+	for k := max(len(p.Order), 1) - 1; k >= 0; k-- {
+		s.present(k)
+		s.suffix = ""
+		if k > 0 {
+			s.suffix = "_2"
+		}
+		s.displays[p.Display].Truths(s.add)
+	}
+	for _, b := range task.Beside {
+		s.suffix = "_" + s.study.Displays[b].Name
+		s.displays[b].Truths(s.add)
+	}
+}
+
+// present prepares presentation k of the trial. Each display has streams of its own.
+func (s *stage) present(k int) {
+	p := s.plan
+	s.interval = k
+	values := s.own
+	if len(p.Order) > 0 && !p.Order[k] {
+		values = p.reference
+	}
+	s.prepare(p.Display, values, k)
+	for i, b := range s.study.Tasks[p.Task].Beside {
+		s.prepare(b, p.beside[i], 2*i+2+k)
+	}
+}
+
+func (s *stage) prepare(d int, values display.Values, place int) {
+	spec := &s.study.Displays[d]
+	s.displays[d].Begin(display.Trial{
+		Values: values, Seed: s.seed, Number: uint32(s.plan.Number), IntervalMs: s.plan.RefreshMs, XDeg: spec.XDeg, YDeg: spec.YDeg, Place: uint32(place),
 	})
-	s.displays[p.Display].Truths(s.add)
+}
+
+// adjusted is the index of the parameter that the trial's task has adjusted.
+func (s *stage) adjusted() int {
+	return s.study.Displays[s.plan.Display].Kind.Index(s.study.Tasks[s.plan.Task].Answer.Parameter)
+}
+
+// Adjust sets what the participant adjusts, from the next frame on. Settings out
+// of range, and those of other trials, change nothing.
+func (r *Run) Adjust(x float64) {
+	s := &r.show
+	if s.plan == nil {
+		return
+	}
+	a := &s.study.Tasks[s.plan.Task].Answer
+	if a.By != study.ByAdjustment || !(x >= a.Min && x <= a.Max) {
+		return
+	}
+	i := s.adjusted()
+	d := s.displays[s.plan.Display]
+	if c, ok := d.(display.Changer); ok && c.Change(i, x) {
+		return
+	}
+	// It goes on as if it had had this setting from onset.
+	s.own[i][0] = x
+	s.prepare(s.plan.Display, s.own, 0)
+	if s.began {
+		d.Step(0, s.list)
+		s.list.Reset()
+		d.Step(s.frame, s.list)
+	}
 }
 
 // FixationList is what the fixation phase shows: the mark alone.
@@ -86,11 +164,33 @@ func (r *Run) Frame(n int) *display.List {
 	}
 	s.frame += n
 	s.list.Reset()
-	s.displays[s.plan.Display].Step(n, s.list)
-	s.ramp()
+	if len(s.plan.Order) > 0 && s.interval == 0 && s.inInterval() >= s.plan.intervalFrames+s.plan.gapFrames {
+		s.present(1)
+		n = s.inInterval()
+		if n > 0 {
+			s.step(0)
+			s.list.Reset()
+		}
+	}
+	if len(s.plan.Order) == 0 || s.inInterval() < s.plan.intervalFrames {
+		s.step(n)
+		s.ramp()
+	}
 	s.addMark()
 	s.digest()
 	return s.list
+}
+
+// inInterval is the refresh interval since the presentation began.
+func (s *stage) inInterval() int {
+	return s.frame - s.interval*(s.plan.intervalFrames+s.plan.gapFrames)
+}
+
+func (s *stage) step(n int) {
+	s.displays[s.plan.Display].Step(n, s.list)
+	for _, b := range s.study.Tasks[s.plan.Task].Beside {
+		s.displays[b].Step(n, s.list)
+	}
 }
 
 // ramp scales contrasts with raised-cosine onset and offset ramps.
@@ -99,7 +199,7 @@ func (s *stage) ramp() {
 	if ramp == 0 {
 		return
 	}
-	at := min(s.frame, s.plan.StimulusFrames-1-s.frame)
+	at := min(s.inInterval(), s.plan.intervalFrames-1-s.inInterval())
 	if at >= ramp {
 		return
 	}
@@ -166,6 +266,7 @@ type Measurement struct {
 	Steps       []int
 	IntervalsMs []float64
 	Interrupted string
+	Given       *Given // of answers that are more than a choice
 }
 
 // FinishTrial joins the plan with what was measured to the trial's record; nil
@@ -185,6 +286,7 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 		OnsetMs: m.OnsetMs, OffsetMs: m.OffsetMs, RefreshMs: p.RefreshMs,
 		FixationSteps: p.FixationFrames, StimulusSteps: p.StimulusFrames,
 		Steps: m.Steps, IntervalsMs: m.IntervalsMs, Digest: r.Digest(), Interrupted: m.Interrupted,
+		Order: orderText(p.Order), Given: m.Given,
 	}
 	if m.Response == "" {
 		t.ResponseMs = math.NaN()
@@ -194,6 +296,9 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 		t.Interrupted, t.Correct = DroppedFrame, -1
 	}
 	t.JitterMs = jitter(m.Steps, m.IntervalsMs)
+	if t.Given != nil {
+		t.Given.complete(r, p, t) // what does not fit is refused with the record
+	}
 	return t
 }
 
@@ -246,12 +351,12 @@ func (r *Run) Redraw(t *TrialRecord) string {
 	if !r.BeginTrial() {
 		return ""
 	}
+	next := 0
 	for i := range t.Steps {
-		if i == 0 {
-			r.Frame(0)
-			continue
+		for ; t.Given != nil && next < len(t.Given.AdjustFrames) && t.Given.AdjustFrames[next] <= float64(i); next++ {
+			r.Adjust(t.Given.AdjustValues[next])
 		}
-		r.Frame(t.Steps[i-1])
+		r.Frame(t.Steps[max(i-1, 0)]) // the first ignores it
 	}
 	return r.Digest()
 }

@@ -58,6 +58,14 @@ type TrialPlan struct {
 	RampFrames     int
 	RefreshMs      float64
 	Feedback       bool // show right or wrong after this trial
+	// Order tells for each of two intervals whether it is the test, otherwise the
+	// reference; nil where there is one presentation.
+	Order []bool
+	Start float64 // dial: direction of the needle at first; adjustment: first setting; otherwise NaN
 
-	values display.Values // all parameters of the display
+	values         display.Values   // all parameters of the display
+	reference      display.Values   // those of the reference
+	beside         []display.Values // those of the task's displays beside
+	intervalFrames int              // refresh intervals of one presentation
+	gapFrames      int
 }

@@ -20,6 +20,9 @@ func (s Step) Encode(st *study.Study) value.Value {
 	}
 	p := s.Trial
 	t := &object{}
+	if !math.IsNaN(p.Start) {
+		t.number("start", p.Start)
+	}
 	t.text("block", st.Blocks[p.Block].Name).number("number", float64(p.Number)).flag("practice", p.Practice).flag("catch", p.Catch).
 		text("task", st.Tasks[p.Task].Name).text("display", st.Displays[p.Display].Name).text("condition", p.Condition).
 		number("level", p.Level).numberMap("values", p.Keys, p.Values).
@@ -46,6 +49,7 @@ func DecodeMeasurement(v value.Value) (Measurement, error) {
 		}
 		m.Steps = append(m.Steps, int(x))
 	}
+	m.Given = f.given(false)
 	f.strict()
 	return m, f.err
 }
