@@ -124,7 +124,11 @@ func errorHandler(log *slog.Logger, page ErrorPage) echo.HTTPErrorHandler {
 			var b [4]byte
 			rand.Read(b[:])
 			reference = hex.EncodeToString(b[:])
-			log.Error("request failed", "reference", reference, "method", c.Request().Method, "path", c.Path(), "error", err)
+			report := log.Error
+			if errors.Is(err, context.Canceled) && c.Request().Context().Err() != nil {
+				report = log.Info // the client has gone: nobody waits for the answer
+			}
+			report("request failed", "reference", reference, "method", c.Request().Method, "path", c.Path(), "error", err)
 		}
 		if c.Request().Method == http.MethodHead {
 			_ = c.NoContent(status)
