@@ -153,6 +153,15 @@ func frame(n int32) int32 {
 	return describe(state.Frame(int(n)))
 }
 
+// adjust sets what the participant adjusts, from the next frame on.
+//
+//go:wasmexport adjust
+func adjust(x float64) {
+	if state != nil {
+		state.Adjust(x)
+	}
+}
+
 //go:wasmexport fixation
 func fixation() int32 {
 	if state == nil {

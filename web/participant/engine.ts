@@ -37,6 +37,24 @@ export interface TrialPlan {
   ramp_frames: number;
   refresh_ms: number;
   feedback: boolean;
+  /** Dial: direction of the needle at first (deg); adjustment: first setting. */
+  start?: number;
+}
+
+/** What an answer consists of besides a choice; lists are empty and numbers null where they do not belong to the task. */
+export interface Given {
+  /** Counter-clockwise from rightwards, 0 to 360. */
+  response_deg: number | null;
+  /** 1 to the task's steps, and the time since the scale appeared. */
+  confidence: number | null;
+  confidence_rt_ms: number | null;
+  /** Each change of the setting: number of the frame that first showed it, what was set, ms from stimulus onset. */
+  adjust_frames: number[];
+  adjust_values: number[];
+  adjust_ms: number[];
+  /** ms from stimulus onset. */
+  held_from_ms: number[];
+  held_to_ms: number[];
 }
 
 /** What was measured in a trial. Times are ms of the performance clock. */
@@ -54,6 +72,8 @@ export interface Measurement {
   intervals_ms: number[];
   /** "" or the event that broke the trial. */
   interrupted: string;
+  /** Of tasks in which an answer is more than a choice. */
+  given?: Given;
 }
 
 /** A trial's record without sequence, clock and bundle, which the recorder sets. */
@@ -155,6 +175,7 @@ interface Exports {
   begin_trial(): number;
   frame(intervals: number): number;
   fixation(): number;
+  adjust(x: number): void;
   finish_trial(bytes: number): number;
   calibrate(bytes: number): number;
 }
@@ -233,6 +254,11 @@ export class Engine {
   /** What the fixation phase shows. */
   fixation(): DisplayList {
     return this.#describe(this.#guard(() => this.#exports.fixation()));
+  }
+
+  /** Sets what the participant adjusts, from the next frame on. */
+  adjust(x: number): void {
+    this.#guard(() => (this.#exports.adjust(x), 0));
   }
 
   /** Joins what was measured to the trial's record. */

@@ -1,8 +1,9 @@
 // Which key gives which answer, as the participant's own keyboard names it.
 
+import { answerKeys } from "./answers.js";
 import { say } from "./messages.js";
 import { h } from "./page.js";
-import type { StudyText } from "./protocol.js";
+import type { StudyText, Task } from "./protocol.js";
 import { inLanguage } from "./questions.js";
 
 type Layout = { get(code: string): string | undefined };
@@ -28,13 +29,20 @@ async function keyboardLayout(): Promise<Layout | null> {
   }
 }
 
+function rows(task: Task, language: string): [string, string[]][] {
+  const c = task.confidence;
+  return [
+    ...task.choices_order.map((name): [string, string[]] => [inLanguage(task.choices[name]!.label, language), task.choices[name]!.keys]), ...answerKeys(task),
+    ...(c ? [[inLanguage(c.ask, language), Array.from({ length: c.steps }, (_, i) => `Digit${i + 1}`)] as [string, string[]]] : []),
+  ];
+}
+
 /** A table of each task's answers and their keys. */
 export async function keyReminder(study: StudyText, language: string): Promise<HTMLElement> {
   const layout = await keyboardLayout();
   const tables = Object.values(study.tasks).map((task) => h("table", { class: "keys" },
     h("caption", {}, inLanguage(task.prompt, language)),
-    h("tbody", {}, ...task.choices_order.map((name) => h("tr", {},
-      h("th", { scope: "row" }, inLanguage(task.choices[name]!.label, language)),
-      h("td", {}, ...task.choices[name]!.keys.map((k) => h("kbd", {}, keyName(k, layout)))))))));
+    h("tbody", {}, ...rows(task, language).map(([what, keys]) => h("tr", {},
+      h("th", { scope: "row" }, what), h("td", {}, ...keys.map((k) => h("kbd", {}, keyName(k, layout)))))))));
   return h("section", { test: "keys" }, h("h2", {}, say("keys_title")), h("p", {}, say("keys_or_buttons")), ...tables);
 }

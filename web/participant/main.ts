@@ -4,6 +4,7 @@
 // Elements carry data-testid: page-NAME for every page, continue for its way
 // on, and the names given to h() and button() elsewhere.
 
+import { answerPanel, confidencePanel, type Panel } from "./answers.js";
 import { call } from "./api.js";
 import { cardPage, checkPage, distancePage, enterFullscreen } from "./calibrate.js";
 import { browserClock, clockWatch } from "./clock.js";
@@ -43,6 +44,7 @@ class Participation {
   private readonly canvas = document.createElement("canvas");
   private readonly buttons = h("div", { class: "answers", test: "answers" });
   private readonly input = new TrialInput(window);
+  private panel: Panel | null = null;
   private calibration = { cssPxPerMm: NaN, distanceMm: NaN, pixelRatio: NaN };
   private withdrawn = false;
   private inTrial = false;
@@ -205,7 +207,7 @@ class Participation {
           class: "link", download: `${this.start.link}-${texts.version}.md`, test: "consent-copy",
           href: URL.createObjectURL(new Blob([`${texts.information}\n${texts.consent}`], { type: "text/markdown" })),
         }, say("consent_copy"));
-        show("consent", this.start.title, languages, h("div", { class: "text" }, renderMarkdown(texts.information)),
+        show("consent", inLanguage(this.study.about.title_in ?? {}, this.language) || this.start.title, languages, h("div", { class: "text" }, renderMarkdown(texts.information)),
           h("h2", {}, say("consent_heading")), h("div", { class: "text" }, renderMarkdown(texts.consent, { lists: false })), ...ticks, line,
           h("div", { class: "actions" }, button(say("consent_decline"), "decline", () => resolve(null), "quiet"), button(say("consent_agree"), "agree", () => void agree())),
           h("p", {}, copy));
@@ -299,12 +301,8 @@ class Participation {
     const renderer = this.stageRenderer();
     document.body.className = "trial";
     const task = this.study.tasks[plan.task]!;
-    this.buttons.replaceChildren(
-      h("p", { class: "prompt" }, inLanguage(task.prompt, this.language)),
-      ...task.choices_order.map((name, i) => h("button", {
-        type: "button", class: "choice", test: `choice-${name}`, tabindex: "-1",
-        pointerdown: ((e: PointerEvent) => this.input.answerButton(i, e)) as (e: never) => void,
-      }, inLanguage(task.choices[name]!.label, this.language))));
+    this.panel = answerPanel(task, this.input, this.language);
+    this.buttons.replaceChildren(...this.panel.elements);
     this.buttons.hidden = true;
     const root = document.getElementById("distal")!;
     if (!this.canvas.isConnected) root.replaceChildren(this.canvas, this.buttons);
@@ -330,10 +328,18 @@ class Participation {
         this.buttons.hidden = !yes;
         this.canvas.dataset["phase"] = yes ? "answer" : "over";
       },
+      adjust: (x) => this.engine.adjust(x),
+      turn: (deg) => this.panel!.turn(deg),
+      ask: (yes) => {
+        this.buttons.hidden = !yes;
+        if (!yes) return;
+        this.buttons.replaceChildren(...confidencePanel(task, this.input, this.language));
+        this.canvas.dataset["phase"] = "confidence";
+      },
     };
     this.inTrial = true;
     const choices = task.choices_order.map((name) => ({ name, keys: task.choices[name]!.keys }));
-    const m = await runTrial(stage, this.input, plan, { responseWindowMs: task.response_window_ms, respondDuring: task.respond_during, choices });
+    const m = await runTrial(stage, this.input, plan, { responseWindowMs: task.response_window_ms, respondDuring: task.respond_during, choices, answer: task.answer, confidenceSteps: task.confidence?.steps });
     this.inTrial = false;
     await this.recordTrial(m);
     const stepMs = this.clockStep();
@@ -373,6 +379,9 @@ class Participation {
   // Events.
 
   private watch(): void {
+    this.canvas.addEventListener("pointermove", (e) => {
+      if ((e.buttons & 1) !== 0) this.input.drag(e.movementX / innerWidth, e);
+    });
     let hidden = false;
     document.addEventListener("visibilitychange", () => {
       if (document.hidden === hidden) return;

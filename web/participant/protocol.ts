@@ -1,5 +1,7 @@
 // What passes between this page, the engine and the server, and the checks that narrow it.
 
+import type { AnswerSpec } from "./reply.js";
+
 export type LocalText = Record<string, string>;
 
 /** Settings of the page's start, from the server. */
@@ -26,6 +28,8 @@ export interface Task {
   response_window_ms: number;
   respond_during: boolean;
   intertrial_ms: number;
+  answer?: AnswerSpec;
+  confidence?: { steps: number; ask: LocalText; low_end: LocalText; high_end: LocalText };
 }
 
 export interface Question {
@@ -43,7 +47,7 @@ export interface Question {
 
 /** The parts of a study's canonical form that pages need. */
 export interface StudyText {
-  about: { title: string; languages: string[]; investigator: string; contact: string; minutes: number; flash_approval: string };
+  about: { title: string; title_in?: LocalText; languages: string[]; investigator: string; contact: string; minutes: number; flash_approval: string };
   participants: { screening: Record<string, { ask: LocalText }>; screening_order: string[] };
   texts: Record<string, { version: string; information: string; consent: string; instructions: string; debrief: string }>;
   screen: {
