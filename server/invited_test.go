@@ -56,7 +56,7 @@ func TestInvitedInGerman(t *testing.T) {
 	w.see("page-consent")
 	w.click("language-de")
 	german("page-consent")
-	w.says(".text", "Teilnahme ist freiwillig")
+	w.says("h1", "In welche Richtung gehen die Punkte?")
 	w.consent()
 	german("page-screening")
 	w.says(".sheet", "Krampfanfall")

@@ -93,6 +93,7 @@ func (c *checker) report(warning bool, message string, keys []any) {
 }
 
 func (c *checker) about() {
+	c.sentences(c.s.About.TitleIn, "about", "title_in")
 	for i, language := range c.s.About.Languages {
 		if contains(c.s.About.Languages[:i], language) {
 			c.fail("language "+quote(language)+" stands twice", "about", "languages", i)

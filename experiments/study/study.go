@@ -36,7 +36,8 @@ type Study struct {
 // About says what the study is and who answers for it.
 type About struct {
 	Name          string // identifier: lower-case letters, digits and hyphens
-	Title         string // what participants read
+	Title         string // what participants read, unless TitleIn has it in their language
+	TitleIn       []LocalText
 	Investigator  string
 	Contact       string // e-mail address or telephone number
 	Institution   string

@@ -92,6 +92,7 @@ func checkURL(s string) string {
 func walkAbout(c *codec, a *About) {
 	c.text("name", &a.Name, word{Required: true, Check: checkIdentifier}, "identifier of the study")
 	c.text("title", &a.Title, word{Required: true}, "title that participants read")
+	c.sentence("title_in", &a.TitleIn, false, "the title in each language, where participants do not all read title")
 	c.text("investigator", &a.Investigator, word{Required: true}, "who answers for the study")
 	c.text("contact", &a.Contact, word{Required: true}, "e-mail address or telephone number")
 	c.text("institution", &a.Institution, word{}, "university, institute or company")
