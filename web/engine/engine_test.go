@@ -195,6 +195,12 @@ func compareTrial(t *testing.T, e *engine, native *run.Run, trial *run.TrialReco
 	e.must(e.call("begin_trial"))
 	native.BeginTrial()
 	for i := range trial.Steps {
+		for _, x := range adjustedAt(trial, i) {
+			if _, err := e.module.ExportedFunction("adjust").Call(context.Background(), math.Float64bits(x)); err != nil {
+				t.Fatal(err)
+			}
+			native.Adjust(x)
+		}
 		step := trial.Steps[max(i-1, 0)]
 		dots, patches := e.frame(step)
 		l := native.Frame(step)
@@ -226,6 +232,19 @@ func compareTrial(t *testing.T, e *engine, native *run.Run, trial *run.TrialReco
 		t.Fatalf("trial %d: digest %s, want %s", trial.Trial, record.Digest, native.Digest())
 	}
 	return len(trial.Steps)
+}
+
+// adjustedAt are the settings that frame i is the first to show.
+func adjustedAt(trial *run.TrialRecord, i int) (list []float64) {
+	if trial.Given == nil {
+		return nil
+	}
+	for k, at := range trial.Given.AdjustFrames {
+		if int(at) == i {
+			list = append(list, trial.Given.AdjustValues[k])
+		}
+	}
+	return list
 }
 
 // Hostile texts give a message, and the engine goes on.

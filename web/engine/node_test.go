@@ -158,7 +158,7 @@ func compareLines(t *testing.T, s *study.Study, a run.Assignment, records []run.
 	if err != nil {
 		t.Fatal(err)
 	}
-	trials := 0
+	trials, frames := 0, 0
 	for i := range records {
 		want, err := value.Canonical(native.Next().Encode(s))
 		if err != nil {
@@ -174,6 +174,10 @@ func compareLines(t *testing.T, s *study.Study, a run.Assignment, records []run.
 			sum := checksum(0)
 			sum.list(native.FixationList())
 			for k := range rec.Trial.Steps {
+				for _, x := range adjustedAt(rec.Trial, k) {
+					native.Adjust(x)
+				}
+				frames++
 				sum.list(native.Frame(rec.Trial.Steps[max(k-1, 0)]))
 			}
 			if uint32(sum) != lines[i].Sum {
@@ -192,8 +196,8 @@ func compareLines(t *testing.T, s *study.Study, a run.Assignment, records []run.
 			t.Fatal(err)
 		}
 	}
-	if trials < 40 {
-		t.Errorf("only %d trials", trials)
+	if trials < 8 || frames < 700 {
+		t.Errorf("only %d trials with %d frames", trials, frames)
 	}
 }
 

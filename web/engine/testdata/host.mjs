@@ -68,10 +68,19 @@ function trial(record) {
       grown = true;
       engine.calibrate("refresh", { intervals_ms: much });
     }
+    const { adjust_frames = [], adjust_values = [] } = record.given ?? {};
+    adjust_frames.forEach((at, k) => at === i && engine.adjust(adjust_values[k]));
     add(engine.frame(steps[Math.max(i - 1, 0)]));
   });
   const { response, rt_ms, input, onset_ms, offset_ms, intervals_ms, interrupted } = record;
-  return engine.finishTrial({ response, rt_ms, input, onset_ms, offset_ms, frame_steps: steps, intervals_ms, interrupted });
+  return engine.finishTrial({
+    response, rt_ms, input, onset_ms, offset_ms, frame_steps: steps, intervals_ms, interrupted, ...(record.given ? { given: measured(record.given) } : {}),
+  });
+}
+
+/** What a page measures of an answer: the other numbers follow from it. */
+function measured({ error_deg, start, setting, held_ms, first_held_ms, ...given }) {
+  return given;
 }
 
 function weigh() {
