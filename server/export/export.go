@@ -353,8 +353,56 @@ func trialColumns() []column[trialRow] {
 		{"dropped_frames", "refreshes", "missed while the stimulus was shown", "", func(r trialRow) string { return strconv.Itoa(r.t.Dropped) }},
 		{"jitter_ms", "ms", "standard deviation of the intervals that were on time", "fewer than two", func(r trialRow) string { return number(r.t.JitterMs) }},
 		{"digest", "", "FNV-1a (64 bits) over the display lists of all presented stimulus frames, 16 hexadecimal digits", "", func(r trialRow) string { return r.t.Digest }},
+		{"interval_order", "", "what the two intervals were: test or reference", "one presentation", func(r trialRow) string { return r.t.Order }},
+		given("response_deg", "deg", "direction that was pointed in, counter-clockwise from rightwards", func(g *run.Given) float64 { return g.ResponseDeg }),
+		given("error_deg", "deg", "response_deg from the direction that was right, counter-clockwise, above −180 to 180", func(g *run.Given) float64 { return g.ErrorDeg }),
+		given("start", "the answer's", "direction (deg) or setting that the participant began with, drawn at random", func(g *run.Given) float64 { return g.Start }),
+		given("setting", "the adjusted parameter's", "setting that was confirmed", func(g *run.Given) float64 { return g.Setting }),
+		{"adjustments", "", "JSON: every change of the setting: [number of the stimulus frame that first showed it from 0, setting, ms from stimulus onset]", "not an adjustment", func(r trialRow) string {
+			if r.t.Given == nil || len(r.t.Given.AdjustFrames) == 0 {
+				return ""
+			}
+			return table(r.t.Given.AdjustFrames, r.t.Given.AdjustValues, r.t.Given.AdjustMs)
+		}},
+		given("held_ms", "ms", "how long the key was held in all", func(g *run.Given) float64 { return g.HeldMs }),
+		given("first_held_ms", "ms", "how long it was held until it was first let go, 0 if never", func(g *run.Given) float64 { return g.FirstHeldMs }),
+		{"held", "ms", "JSON: [from, to] of each time it was held, from stimulus onset", "not held", func(r trialRow) string {
+			if r.t.Given == nil || len(r.t.Given.HeldFromMs) == 0 {
+				return ""
+			}
+			return table(r.t.Given.HeldFromMs, r.t.Given.HeldToMs)
+		}},
+		given("confidence", "", "step of the scale after the answer, 1 is the low end", func(g *run.Given) float64 { return g.Confidence }),
+		given("confidence_rt_ms", "ms", "from the appearance of the scale", func(g *run.Given) float64 { return g.SureMs }),
 		{"interrupted", "", "what spoiled the trial, which then counts for nothing and was asked again: an event (hidden, escape …), or dropped_frame where the study has such trials repeated", "not interrupted", func(r trialRow) string { return r.t.Interrupted }},
 	}
+}
+
+// given is a column of what an answer consists of besides a choice.
+func given(name, unit, doc string, of func(*run.Given) float64) column[trialRow] {
+	return column[trialRow]{name, unit, doc, "not part of the task, or no answer", func(r trialRow) string {
+		if r.t.Given == nil {
+			return ""
+		}
+		return number(of(r.t.Given))
+	}}
+}
+
+// table is a JSON list of rows made of columns of equal length.
+func table(columns ...[]float64) string {
+	rows := make([]value.Value, len(columns[0]))
+	for i := range rows {
+		var row []float64
+		for _, c := range columns {
+			row = append(row, c[i])
+		}
+		rows[i] = value.Numbers(row)
+	}
+	text, err := value.Canonical(value.List(rows...))
+	if err != nil {
+		return ""
+	}
+	return string(text)
 }
 
 func object(keys []string, numbers []float64) string {
