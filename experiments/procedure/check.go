@@ -1,6 +1,10 @@
 package procedure
 
-import "strconv"
+import (
+	"strconv"
+
+	"distal/experiments/exact"
+)
 
 // Problem is a setting that cannot work.
 type Problem struct {
@@ -26,8 +30,14 @@ func Check(s Spec) []Problem {
 		checkConstant(s, add)
 	case Staircase:
 		checkStaircase(s, add)
-	case QuestPlus:
+	case QuestPlus, Quest, Psi, PsiMarginal:
 		checkQuestPlus(s, add)
+		checkSecond(s, add)
+	case Limits:
+		checkLimits(s, add)
+	}
+	if s.Second != "" && !s.Method.Bayesian() {
+		add("second_parameter", "only quest_plus, quest, psi and psi_marginal vary a second parameter")
 	}
 	return list
 }
@@ -103,8 +113,50 @@ func checkQuestPlus(s Spec, add func(key, message string)) {
 			add("lapses", "guess and lapse together reach 1: the function would be flat")
 		}
 	}
-	if cells := s.ThresholdCount * len(s.Slopes) * len(s.Lapses) * s.LevelCount; cells > 4_000_000 {
+	if s.Prior == Normal && (s.PriorMean < s.ThresholdMin || s.PriorMean > s.ThresholdMax) {
+		add("prior_mean", "the likeliest threshold "+number(s.PriorMean)+" is outside threshold_min to threshold_max")
+	}
+	if s.KeepSlope && s.Method != PsiMarginal {
+		add("keep_slope", "it belongs to method psi_marginal")
+	}
+	if s.StopEntropyBits > 0 && s.StopEntropyBits >= exact.Log(float64(s.ThresholdCount))/exact.Ln2 {
+		add("stop_entropy_bits", "it would end at once: "+strconv.Itoa(s.ThresholdCount)+" thresholds have at most "+number(exact.Log(float64(s.ThresholdCount))/exact.Ln2)+" bits")
+	}
+	if cells := s.ThresholdCount * len(s.Slopes) * len(s.Lapses) * s.LevelCount * max(1, len(s.SecondLevels)) * max(1, len(s.Gradients)); cells > 4_000_000 {
 		add("threshold_count", "thresholds × slopes × lapses × levels are "+strconv.Itoa(cells)+" cells: at most 4 000 000 keep a trial's update short")
+	}
+}
+
+func checkSecond(s Spec, add func(key, message string)) {
+	switch {
+	case s.Second == "" && len(s.SecondLevels)+len(s.Gradients) > 0:
+		add("second_parameter", "name the parameter that second_levels and gradients are about")
+	case s.Second != "" && len(s.SecondLevels) < 2:
+		add("second_levels", "at least 2 levels of "+s.Second+" are needed")
+	case s.Second != "" && s.Second == s.Parameter:
+		add("second_parameter", s.Second+" is varied already")
+	}
+	if rule, _ := s.rule(1); s.Second != "" && rule > Variance {
+		add("place", "with a second parameter levels are chosen by entropy or variance: mode, mean and median do not say which of its levels comes next")
+	}
+}
+
+func checkLimits(s Spec, add func(key, message string)) {
+	if s.Reversals < 2 {
+		add("reversals", "give the number of series, 2 or more")
+	}
+	if s.EasierIs == 0 {
+		add("easier_is", "it is +1 or −1")
+	}
+	if len(s.StepsUp) != 1 || s.StepsUp[0] <= 0 {
+		add("steps", "the method of limits needs one step above 0")
+		return
+	}
+	if s.Scale == Log10 && s.Min <= 0 {
+		return
+	}
+	if n := float64((onScale(s.Scale, s.Max) - onScale(s.Scale, s.Min)) / s.StepsUp[0]); n < 4 || n > 10000 {
+		add("steps", number(n)+" steps fit between min and max: 4 to 10 000 make a series")
 	}
 }
 

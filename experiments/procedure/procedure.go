@@ -30,6 +30,10 @@ type Procedure interface {
 // its trial did not count. Other procedures give the level again.
 type Postponer interface{ Postpone() }
 
+// A Setter is a Procedure whose trials end with a setting, in the level's unit,
+// to be given before Record.
+type Setter interface{ Set(x float64) }
+
 // Estimate is a procedure's own estimate of the threshold on the level's scale.
 // Valid is false while there is none (no reversals yet, say): the numbers are
 // then zero, and Reason says why.
@@ -39,6 +43,7 @@ type Estimate struct {
 	SDLog10   float64 // posterior or reversal sd: log10 units on a log scale, the level's unit on a linear one
 	Slope     float64 // 0 where the procedure does not estimate it
 	Lapse     float64
+	Gradient  float64 // of log threshold on log10 of the second parameter
 	Reversals int
 	Reason    string
 }
@@ -51,10 +56,15 @@ const (
 	Constant Method = iota // method of constant stimuli
 	Staircase
 	QuestPlus
+	Quest       // Watson and Pelli 1983
+	Psi         // Kontsevich and Tyler 1999
+	PsiMarginal // Prins 2013
+	Limits
+	Adjustment
 )
 
 // MethodNames are the names in study files, indexed by Method.
-var MethodNames = []string{"constant", "staircase", "quest_plus"}
+var MethodNames = []string{"constant", "staircase", "quest_plus", "quest", "psi", "psi_marginal", "limits", "adjustment"}
 
 // Scale is the axis on which levels are stepped and fitted.
 type Scale int
@@ -73,21 +83,26 @@ type Prior int
 
 // Priors, named in study files as in PriorNames. RaisedCosine is ten times as
 // likely in the middle of the range, on the scale, as at its ends; halfway out it is
-// as likely as Uniform.
+// as likely as Uniform. Normal has PriorMean and PriorSDLog10. Middle is even over
+// the middle half of the range and a twentieth of that outside.
 const (
 	RaisedCosine Prior = iota
 	Uniform
+	Normal
+	Middle
 )
 
 // PriorNames are the names in study files, indexed by Prior.
-var PriorNames = []string{"raised_cosine", "uniform"}
+var PriorNames = []string{"raised_cosine", "uniform", "normal", "middle"}
 
 // DefaultSlopes are quantiles, at 1/12, 3/12, … 11/12, of a log-normal
-// distribution with median 3 and standard deviation 0.4 of the natural
+// distribution with median 3.5 and standard deviation 0.3 of the natural
 // logarithm, so that taking them as equally likely is taking that distribution:
-// nine in ten from 1.6 to 5.8. Two-alternative functions of detection and
-// discrimination mostly lie there (common practice, no source).
-func DefaultSlopes() []float64 { return []float64{1.73, 2.29, 2.76, 3.26, 3.93, 5.22} }
+// nine in ten from 2.1 to 5.7. The median is the slope of two-alternative
+// contrast detection (Watson AB, Pelli DG 1983, Percept Psychophys 33:113); the
+// spread is common practice, no source. Where functions are known to be
+// shallower, as in some discrimination of motion, a study gives its own slopes.
+func DefaultSlopes() []float64 { return []float64{2.31, 2.86, 3.29, 3.73, 4.28, 5.3} }
 
 // DefaultLapses are quantiles, at 1/8, 3/8, 5/8 and 7/8, of a beta distribution
 // with mean 0.02 and standard deviation 0.014, Beta(2, 98). Attentive observers
@@ -130,4 +145,17 @@ type Spec struct {
 	// Nuisance: slope and lapse are integrated out and trials are spent on the
 	// threshold alone (Prins 2013).
 	Nuisance bool
+
+	// Bayesian methods.
+	Place           Place
+	PriorMean       float64 // of Normal: the likeliest threshold, in the level's unit
+	PriorSDLog10    float64
+	KeepSlope       bool    // PsiMarginal: only lapse rates (and gradients) are integrated out
+	StopEntropyBits float64 // ends when the entropy of the threshold is below, 0: never
+
+	// A second parameter, of which every level can be shown with every level of
+	// the first. Its gradients are equally likely beforehand.
+	Second       string
+	SecondLevels []float64 // above 0, in the second parameter's unit
+	Gradients    []float64 // log10 threshold for each log10 unit of the second parameter
 }

@@ -20,40 +20,57 @@ import (
 // entropy of that marginal; the variance is what an estimate is judged by. It is
 // reckoned in units of the function's own spread, 1/b, or else the few shallow
 // functions still considered, with their wide errors, would choose the levels.
+//
+// The other Bayesian procedures are settings of the same: see Spec.rule. With a
+// second parameter s, x is x − G (log10 s − mean of log10 s): the gradient G of
+// log threshold is one more parameter.
 type questPlus struct {
 	spec       Spec
 	thresholds []float64 // log10 of threshold
 	levels     []float64 // as shown
-	cells      int       // slopes × lapses
+	cells      int       // gradients × slopes × lapses
+	rule       Place     // never Own
+	width      int       // cells that are summed before an entropy is taken
+	offset     float64   // from threshold to the most telling level, log10 units
 	// right is P(correct) for level, threshold and cell: [level][threshold][cell].
 	right []float64
 	// doubt is the entropy (nats) of the outcome for the same, kept for the
 	// joint entropy only.
 	doubt     []float64
 	posterior []float64 // [threshold][cell]
-	// scaled is the posterior times slope squared, mass its sum over the cells
-	// of each threshold, centre the mean log threshold that it gives.
+	// Least variance: scaled is the posterior times slope squared, mass its sum
+	// over the cells of each threshold, centre the mean log threshold that it
+	// gives. Otherwise mass is the posterior's sum over each width cells.
 	scaled   []float64
 	mass     []float64
 	centre   float64
 	trials   int
-	level    [1]float64
+	level    [2]float64
 	chosen   int
 	ready    bool
 	estimate Estimate
 }
 
 func newQuestPlus(s Spec) *questPlus {
-	q := &questPlus{spec: s, cells: len(s.Slopes) * len(s.Lapses)}
+	q := &questPlus{spec: s, cells: max(1, len(s.Gradients)) * len(s.Slopes) * len(s.Lapses)}
+	if len(s.Gradients) == 0 {
+		q.spec.Gradients = []float64{0}
+	}
+	q.rule, q.width = s.rule(q.cells)
+	if q.rule > Variance {
+		q.offset = telling(s)
+	}
 	q.thresholds = grid(s.Scale, s.ThresholdMin, s.ThresholdMax, s.ThresholdCount)
 	for i, x := range q.thresholds {
 		q.thresholds[i] = exact.Log10(x)
 	}
 	q.levels = grid(s.Scale, s.Min, s.Max, s.LevelCount)
-	q.right = make([]float64, len(q.levels)*len(q.thresholds)*q.cells)
+	q.right = make([]float64, len(q.levels)*q.seconds()*len(q.thresholds)*q.cells)
 	q.posterior = make([]float64, len(q.thresholds)*q.cells)
-	q.scaled = make([]float64, len(q.posterior))
-	q.mass = make([]float64, len(q.thresholds))
+	q.mass = make([]float64, len(q.posterior)/q.width)
+	if q.rule == Variance {
+		q.scaled = make([]float64, len(q.posterior))
+	}
 	q.tabulate()
 	q.setPrior()
 	q.marginalise()
@@ -76,15 +93,46 @@ func grid(scale Scale, low, high float64, n int) []float64 {
 // rule out (wrong at a sure level without lapses) would leave no posterior.
 const leastChance = 1e-12
 
+// seconds is the number of levels of the second parameter, 1 where there is none.
+func (q *questPlus) seconds() int { return max(1, len(q.spec.SecondLevels)) }
+
+// beyond is how far second level j lies above the middle one, in log10 units.
+func (q *questPlus) beyond(j int) float64 {
+	mean, own := 0.0, 0.0
+	for k, x := range q.spec.SecondLevels {
+		log := exact.Log10(x)
+		mean += log / float64(q.seconds())
+		if k == j {
+			own = log
+		}
+	}
+	return own - mean
+}
+
 func (q *questPlus) tabulate() {
 	i := 0
 	for _, level := range q.levels {
-		x := exact.Log10(max(level, 0)) // −∞ at 0 and below
-		for _, t := range q.thresholds {
+		for j := range q.seconds() {
+			i = q.tabulateLevel(i, level, q.beyond(j))
+		}
+	}
+	if q.rule != Entropy || q.width > 1 {
+		return
+	}
+	q.doubt = make([]float64, len(q.right))
+	for i, p := range q.right {
+		q.doubt[i] = plogp(p) + plogp(1-p)
+	}
+}
+
+func (q *questPlus) tabulateLevel(i int, level, beyond float64) int {
+	x := exact.Log10(max(level, 0)) // −∞ at 0 and below
+	for _, t := range q.thresholds {
+		for _, gradient := range q.spec.Gradients {
 			for _, slope := range q.spec.Slopes {
 				f := 0.0
 				if level > 0 {
-					f = -exact.Expm1(-exact.Exp10(float64(slope * (x - t))))
+					f = -exact.Expm1(-exact.Exp10(float64(slope * (x - float64(gradient*beyond) - t))))
 				}
 				for _, lapse := range q.spec.Lapses {
 					p := q.spec.Guess + float64((1-q.spec.Guess-lapse)*f)
@@ -94,24 +142,14 @@ func (q *questPlus) tabulate() {
 			}
 		}
 	}
-	if q.spec.Nuisance {
-		return
-	}
-	q.doubt = make([]float64, len(q.right))
-	for i, p := range q.right {
-		q.doubt[i] = plogp(p) + plogp(1-p)
-	}
+	return i
 }
 
-// setPrior weighs the thresholds; slopes and lapse rates are equally likely.
+// setPrior weighs the thresholds; the other parameters are equally likely.
 func (q *questPlus) setPrior() {
 	total := 0.0
 	for t := range q.thresholds {
-		weight := 1.0
-		if q.spec.Prior == RaisedCosine {
-			share := float64(t) / float64(len(q.thresholds)-1)
-			weight = priorFloor + float64((1-priorFloor)*(0.5-float64(0.5*exact.Cos(float64(2*exact.Pi*share)))))
-		}
+		weight := q.spec.weight(float64(t)/float64(len(q.thresholds)-1), q.thresholds[t])
 		for c := t * q.cells; c < (t+1)*q.cells; c++ {
 			q.posterior[c] = weight
 			total += weight
@@ -125,19 +163,48 @@ func (q *questPlus) setPrior() {
 // priorFloor is the weight of the ends of the range, relative to its middle.
 const priorFloor = 0.1
 
-// marginalise sums slope and lapse out of the scaled posterior.
+// outerWeight is the weight of the outer quarters of the range under Middle.
+const outerWeight = 0.05
+
+// weight is how likely a threshold is beforehand, up to a factor: share of the
+// range, as log10.
+func (s *Spec) weight(share, log float64) float64 {
+	switch s.Prior {
+	case RaisedCosine:
+		return priorFloor + float64((1-priorFloor)*(0.5-float64(0.5*exact.Cos(float64(2*exact.Pi*share)))))
+	case Normal:
+		z := (log - exact.Log10(s.PriorMean)) / s.PriorSDLog10
+		return max(exact.Exp(float64(-0.5*z*z)), leastChance)
+	case Middle:
+		if share < 0.25 || share > 0.75 {
+			return outerWeight
+		}
+	}
+	return 1
+}
+
+// marginalise sums what is not of interest out of the posterior.
 func (q *questPlus) marginalise() {
-	if !q.spec.Nuisance {
+	if q.rule != Variance {
+		for g := range q.mass {
+			sum := 0.0
+			for _, p := range q.posterior[g*q.width : (g+1)*q.width] {
+				sum += p
+			}
+			q.mass[g] = sum
+		}
 		return
 	}
 	total, moment, c := 0.0, 0.0, 0
 	for t := range q.thresholds {
 		sum := 0.0
-		for _, slope := range q.spec.Slopes {
-			for range q.spec.Lapses {
-				q.scaled[c] = float64(q.posterior[c] * slope * slope)
-				sum += q.scaled[c]
-				c++
+		for range q.spec.Gradients {
+			for _, slope := range q.spec.Slopes {
+				for range q.spec.Lapses {
+					q.scaled[c] = float64(q.posterior[c] * slope * slope)
+					sum += q.scaled[c]
+					c++
+				}
 			}
 		}
 		q.mass[t] = sum
@@ -158,7 +225,12 @@ func (q *questPlus) Next() ([]float64, bool) {
 		q.chosen = q.best()
 		q.ready = true
 	}
-	q.level[0] = q.levels[q.chosen]
+	n := q.seconds()
+	q.level[0] = q.levels[q.chosen/n]
+	if len(q.spec.SecondLevels) == 0 {
+		return q.level[:1], !q.ended()
+	}
+	q.level[1] = q.spec.SecondLevels[q.chosen%n]
 	return q.level[:], !q.ended()
 }
 
@@ -166,17 +238,30 @@ func (q *questPlus) ended() bool {
 	if q.trials >= q.spec.MaxTrials {
 		return true
 	}
-	return q.spec.StopSDLog10 > 0 && q.trials >= max(q.spec.MinTrials, 1) && q.Estimate().SDLog10 < q.spec.StopSDLog10
+	if q.trials < max(q.spec.MinTrials, 1) {
+		return false
+	}
+	return q.spec.StopSDLog10 > 0 && q.Estimate().SDLog10 < q.spec.StopSDLog10 ||
+		q.spec.StopEntropyBits > 0 && q.entropyBits() < q.spec.StopEntropyBits
 }
 
 // best is the index of the level with the least expected loss; the first of equals.
 func (q *questPlus) best() int {
 	best, least := 0, math.Inf(1)
-	for i := range q.levels {
+	aim := 0.0
+	if q.rule > Variance {
+		aim = q.aim() + q.offset
+	}
+	for i := range len(q.levels) * q.seconds() {
 		var loss float64
-		if q.spec.Nuisance {
+		switch {
+		case q.rule == Variance:
 			loss = q.marginalVariance(i)
-		} else {
+		case q.rule > Variance:
+			loss = math.Abs(exact.Log10(max(q.levels[i/q.seconds()], 0)) - aim)
+		case q.width > 1:
+			loss = q.marginalEntropy(i)
+		default:
 			loss = q.jointEntropy(i)
 		}
 		if loss < least {
@@ -230,6 +315,25 @@ func (q *questPlus) jointEntropy(i int) float64 {
 	return dot(q.posterior, q.doubt[i*n:(i+1)*n]) - plogp(total) - plogp(1-total)
 }
 
+// marginalEntropy is the same, up to a constant, for the posterior summed over
+// each width cells (Prins 2013).
+func (q *questPlus) marginalEntropy(i int) float64 {
+	n := len(q.posterior)
+	right := q.right[i*n : (i+1)*n]
+	var sum, hit, total float64
+	for g, mass := range q.mass {
+		if mass < negligible {
+			continue
+		}
+		from, to := g*q.width, (g+1)*q.width
+		a := dot(q.posterior[from:to], right[from:to])
+		hit += a
+		total += mass
+		sum += plogp(a) + plogp(mass-a)
+	}
+	return sum - plogp(hit) - plogp(total-hit)
+}
+
 // dot is Σ p r in four interleaved sums, which a processor can overlap.
 func dot(p, r []float64) float64 {
 	var a, b, c, d float64
@@ -281,19 +385,23 @@ func (q *questPlus) Estimate() Estimate {
 	}
 	mean, square, slope, lapse := 0.0, 0.0, 0.0, 0.0
 	c := 0
+	gradient := 0.0
 	for _, t := range q.thresholds {
-		for _, b := range q.spec.Slopes {
-			for _, l := range q.spec.Lapses {
-				p := q.posterior[c]
-				mean += float64(p * t)
-				square += float64(p * t * t)
-				slope += float64(p * b)
-				lapse += float64(p * l)
-				c++
+		for _, g := range q.spec.Gradients {
+			for _, b := range q.spec.Slopes {
+				for _, l := range q.spec.Lapses {
+					p := q.posterior[c]
+					mean += float64(p * t)
+					square += float64(p * t * t)
+					gradient += float64(p * g)
+					slope += float64(p * b)
+					lapse += float64(p * l)
+					c++
+				}
 			}
 		}
 	}
-	e := Estimate{Valid: q.trials > 0, Threshold: exact.Exp10(mean), Slope: slope, Lapse: lapse}
+	e := Estimate{Valid: q.trials > 0, Threshold: exact.Exp10(mean), Slope: slope, Lapse: lapse, Gradient: gradient}
 	e.SDLog10 = math.Sqrt(max(0, square-float64(mean*mean)))
 	if !e.Valid {
 		return Estimate{SDLog10: e.SDLog10, Reason: "there are no trials yet"}

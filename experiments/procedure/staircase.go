@@ -1,10 +1,6 @@
 package procedure
 
-import (
-	"math"
-
-	"distal/experiments/exact"
-)
+import "distal/experiments/exact"
 
 // Target is the proportion correct at which a transformed or weighted up-down
 // staircase converges when steps are small against the spread of the function:
@@ -125,20 +121,7 @@ func (t *staircase) Estimate() Estimate {
 	if len(used)%2 == 1 {
 		used = used[1:]
 	}
-	e := Estimate{Reversals: len(t.reversals)}
-	if len(used) < 2 {
-		e.Reason = "there are too few reversals for an estimate"
-		return e
-	}
-	mean, square := 0.0, 0.0
-	for _, x := range used {
-		mean += x / float64(len(used))
-	}
-	for _, x := range used {
-		square += float64((x - mean) * (x - mean))
-	}
-	e.Valid = true
-	e.Threshold = offScale(t.spec.Scale, mean)
-	e.SDLog10 = math.Sqrt(square / float64(len(used)-1))
+	e := meanOf(t.spec.Scale, used, "there are too few reversals for an estimate")
+	e.Reversals = len(t.reversals)
 	return e
 }

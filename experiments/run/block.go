@@ -214,15 +214,19 @@ func (p *TrialPlan) note(key string, x float64) {
 // nearest whole number, which is then the level.
 func (p *TrialPlan) setLevel(r *Run, spec *study.Block, proc procedure.Procedure) {
 	levels, _ := proc.Next()
-	key := r.study.Procedures[spec.Procedure].Parameter
+	s := &r.study.Procedures[spec.Procedure]
 	kind := r.study.Displays[p.Display].Kind
-	i := kind.Index(key)
-	p.Level = levels[0]
-	if kind.Params[i].Type == display.Integer {
-		p.Level = exact.Round(p.Level)
+	for n, key := range []string{s.Parameter, s.Second}[:len(levels)] {
+		i, x := kind.Index(key), levels[n]
+		if kind.Params[i].Type == display.Integer {
+			x = exact.Round(x)
+		}
+		p.values[i][0] = x
+		p.note(key, x)
+		if n == 0 {
+			p.Level = x
+		}
 	}
-	p.values[i][0] = p.Level
-	p.note(key, p.Level)
 }
 
 // record takes the outcome of the trial that was planned.
@@ -259,7 +263,11 @@ func (b *block) record(r *Run, p *TrialPlan, t *TrialRecord) {
 	}
 	b.trials++
 	if p.Track >= 0 {
-		b.tracks[p.Track].procedure.Record(max(t.Correct, 0))
+		proc := b.tracks[p.Track].procedure
+		if set, ok := proc.(procedure.Setter); ok && t.Given != nil {
+			set.Set(t.Given.Setting)
+		}
+		proc.Record(max(t.Correct, 0))
 	}
 	if spec.BreakEvery > 0 && b.sinceBreak >= spec.BreakEvery {
 		b.breakDue = true

@@ -5,7 +5,6 @@ import (
 	"strings"
 
 	"distal/experiments/display"
-	"distal/experiments/procedure"
 )
 
 // Limits of a block, so that every combination can be checked and each track
@@ -125,17 +124,33 @@ func (c *checker) blockProcedure(b *Block, d *DisplaySpec, task *Task) {
 		c.fail(p.Parameter+" is not a number, so a procedure cannot vary it", "procedures", p.Name, "parameter")
 		return
 	}
-	for _, level := range []struct {
-		key string
-		x   float64
-	}{{"min", p.Min}, {"max", p.Max}} {
-		if level.x < param.Min || level.x > param.Max {
-			c.fail(p.Parameter+" of display "+d.Name+" can only be "+rangeText(param.Min, param.Max), "procedures", p.Name, level.key)
-		}
-	}
-	if n := len(task.Choices); p.Method == procedure.QuestPlus && n > 1 && math.Abs(p.Guess-1/float64(n)) > 1e-3 {
+	c.levelsShown(d, param, p.Name, "min", p.Min)
+	c.levelsShown(d, param, p.Name, "max", p.Max)
+	c.secondParameter(d, p)
+	if n := len(task.Choices); p.Method.Bayesian() && n > 1 && math.Abs(p.Guess-1/float64(n)) > 1e-3 {
 		c.warn("guess is "+formatNumber(p.Guess)+", but the task has "+formatNumber(float64(n))+
 			" choices: guessing is right in "+formatNumber(1/float64(n)), "procedures", p.Name, "guess")
+	}
+}
+
+// levelsShown checks that the display can show level x of a procedure.
+func (c *checker) levelsShown(d *DisplaySpec, param *display.Param, name, key string, x float64) {
+	if x < param.Min || x > param.Max {
+		c.fail(param.Key+" of display "+d.Name+" can only be "+rangeText(param.Min, param.Max), "procedures", name, key)
+	}
+}
+
+func (c *checker) secondParameter(d *DisplaySpec, p *ProcedureSpec) {
+	if p.Second == "" {
+		return
+	}
+	j := d.Kind.Index(p.Second)
+	if j < 0 || d.Kind.Params[j].Type == display.Choice || d.Kind.Params[j].Type == display.Boolean {
+		c.fail("display "+d.Name+" has no number "+quote(p.Second), "procedures", p.Name, "second_parameter")
+		return
+	}
+	for _, x := range p.SecondLevels {
+		c.levelsShown(d, &d.Kind.Params[j], p.Name, "second_levels", x)
 	}
 }
 
@@ -150,6 +165,9 @@ func (c *checker) decidedOnce(i int, b *Block) {
 	if b.Procedure >= 0 {
 		p := &c.s.Procedures[b.Procedure]
 		owner[p.Parameter] = "procedure " + p.Name + " chooses it"
+		if p.Second != "" {
+			owner[p.Second] = owner[p.Parameter]
+		}
 	}
 	claim := func(list []Setting, keys ...any) {
 		for _, s := range list {
@@ -211,7 +229,17 @@ func (c *checker) levels(b *Block, d *DisplaySpec) [][]Setting {
 	if d.Kind.Index(p.Parameter) < 0 || c.broken("procedures."+p.Name) {
 		return [][]Setting{nil}
 	}
-	return [][]Setting{{{Key: p.Parameter, Value: p.Min}}, {{Key: p.Parameter, Value: p.Max}}}
+	var list [][]Setting
+	for _, x := range []float64{p.Min, p.Max} {
+		if p.Second == "" || d.Kind.Index(p.Second) < 0 {
+			list = append(list, []Setting{{Key: p.Parameter, Value: x}})
+			continue
+		}
+		for _, y := range p.SecondLevels {
+			list = append(list, []Setting{{Key: p.Parameter, Value: x}, {Key: p.Second, Value: y}})
+		}
+	}
+	return list
 }
 
 // trial checks the display with the settings put in one after the other.

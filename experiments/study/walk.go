@@ -427,24 +427,53 @@ func walkProcedure(c *codec, p *ProcedureSpec) {
 	c.number("start", &p.Start, num{Min: -inf, Max: inf}, "staircase: first level")
 	c.whole("down", &p.Down, num{Min: 1, Max: 10, Default: 2}, "staircase: right answers in a row before it gets harder")
 	c.whole("up", &p.Up, num{Min: 1, Max: 10, Default: 1}, "staircase: wrong answers in a row before it gets easier")
-	c.numbers("steps", &p.StepsUp, num{Min: 0, Max: inf}, "staircase: step towards easier until each reversal, the last stays; log10 units or the parameter's unit")
+	c.numbers("steps", &p.StepsUp, num{Min: 0, Max: inf}, "staircase: step towards easier until each reversal, the last stays; log10 units or the parameter's unit; limits: the step, one number")
 	c.number("step_ratio", &p.StepRatio, num{Min: 0.01, Max: 100, Default: 1}, "staircase: step towards harder ÷ step towards easier (García-Pérez 1998)")
-	c.whole("reversals", &p.Reversals, num{Min: 0, Max: 1000}, "staircase: ends after so many, 0: after max_trials")
+	c.whole("reversals", &p.Reversals, num{Min: 0, Max: 1000}, "staircase: ends after so many, 0: after max_trials; limits: number of series")
 	c.whole("discard", &p.Discard, num{Min: 0, Max: 1000, Default: 2}, "staircase: reversals left out of the estimate")
 	c.whole("easier_is", &p.EasierIs, num{Min: -1, Max: 1, Default: 1}, "+1: a higher level is easier, −1: a lower one")
 	c.number("threshold_min", &p.ThresholdMin, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: lowest threshold considered, 0: min")
 	c.number("threshold_max", &p.ThresholdMax, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: highest threshold considered, 0: max")
 	c.whole("threshold_count", &p.ThresholdCount, num{Min: 2, Max: 400, Default: 80}, "quest_plus: thresholds considered, evenly on the scale")
-	oneOf(c, "prior", &p.Prior, procedure.PriorNames, procedure.RaisedCosine, false, "quest_plus: how likely the thresholds are beforehand: raised_cosine is ten times as likely in the middle as at the ends")
+	oneOf(c, "prior", &p.Prior, procedure.PriorNames, usualPrior(p.Method), false, "quest_plus: how likely the thresholds are beforehand: middle is even over the middle half of the range and a twentieth of that outside, raised_cosine ten times as likely in the middle as at the ends; usual for quest is normal, for psi and psi_marginal uniform")
+	c.rare(p.Prior != procedure.Normal, func() {
+		c.number("prior_mean", &p.PriorMean, num{Min: -inf, Max: inf}, "prior normal: the likeliest threshold, 0: the middle of the range")
+		c.number("prior_sd_log10", &p.PriorSDLog10, num{Min: 0.01, Max: 10, Default: 0.5}, "prior normal: standard deviation of log10 threshold")
+	})
 	c.numbers("slopes", &p.Slopes, num{Min: 0.01, Max: 100}, "quest_plus: Weibull slopes considered, equally likely")
 	c.numbers("lapses", &p.Lapses, num{Min: 0, Max: 0.5}, "quest_plus: lapse rates considered, equally likely")
 	c.number("guess", &p.Guess, num{Min: 0, Max: 0.9, Default: 0.5}, "proportion correct by guessing")
 	c.whole("level_count", &p.LevelCount, num{Min: 2, Max: 400, Default: 60}, "quest_plus: levels from min to max, evenly on the scale")
 	c.number("stop_sd_log10", &p.StopSDLog10, num{Min: 0, Max: 2}, "quest_plus: ends when the posterior sd of the threshold is below, 0: never")
 	c.flag("nuisance", &p.Nuisance, true, "quest_plus: slope and lapse are integrated out (Prins 2013)")
+	c.rare(p.Place == procedure.Own, func() {
+		oneOf(c, "place", &p.Place, procedure.PlaceNames, procedure.Own, false, "Bayesian methods: rule by which the level is chosen: least expected entropy or variance, or where a trial tells most if the threshold is the posterior's mode, mean or median; own is the published rule of the method")
+	})
+	c.rare(!p.KeepSlope, func() {
+		c.flag("keep_slope", &p.KeepSlope, false, "psi_marginal: the slope is of interest too, only the lapse rate is integrated out")
+	})
+	c.rare(p.StopEntropyBits == 0, func() {
+		c.number("stop_entropy_bits", &p.StopEntropyBits, num{Min: 0, Max: 20}, "Bayesian methods: ends when the entropy of the threshold's posterior is below, 0: never")
+	})
+	c.rare(p.Second == "", func() {
+		c.text("second_parameter", &p.Second, word{}, "Bayesian methods: another display parameter, of which each level is considered with each level of the first")
+		c.numbers("second_levels", &p.SecondLevels, num{Min: 1e-9, Max: inf}, "levels of second_parameter")
+		c.numbers("gradients", &p.Gradients, num{Min: -10, Max: 10}, "change of log10 threshold for each log10 unit of second_parameter: those considered, equally likely")
+	})
 	if c.mode == reading {
 		fillProcedure(&p.Spec)
 	}
+}
+
+// usualPrior is the prior of thresholds where a study names none.
+func usualPrior(m procedure.Method) procedure.Prior {
+	switch m {
+	case procedure.Quest:
+		return procedure.Normal
+	case procedure.Psi, procedure.PsiMarginal:
+		return procedure.Uniform
+	}
+	return procedure.Middle
 }
 
 // fillProcedure puts in defaults that depend on other keys.
@@ -452,12 +481,7 @@ func fillProcedure(p *procedure.Spec) {
 	if p.ThresholdMin == 0 && p.ThresholdMax == 0 {
 		p.ThresholdMin, p.ThresholdMax = p.Min, p.Max
 	}
-	if len(p.Slopes) == 0 {
-		p.Slopes = procedure.DefaultSlopes()
-	}
-	if len(p.Lapses) == 0 {
-		p.Lapses = procedure.DefaultLapses()
-	}
+	p.FillModel()
 	if len(p.StepsUp) == 0 {
 		p.StepsUp = []float64{0.2, 0.1}
 	}
