@@ -91,6 +91,10 @@ func TestWorkspaceInBrowser(t *testing.T) {
 	t.Logf("the rules say: %s", decisions)
 	p.do(chromedp.Navigate(l.url + "/runs/" + good.String()))
 	p.accessible(t, "run")
+	if n := p.number(`document.querySelectorAll('.plot .standing').length`); n < 40 {
+		t.Errorf("%v of the procedure's estimates are drawn", n)
+	}
+	p.see("standing")
 	p.do(chromedp.SendKeys(id("reason"), "the dog walked over the keyboard", chromedp.ByQuery))
 	p.click("exclude")
 	p.see("decisions")

@@ -268,6 +268,7 @@ func (b *block) record(r *Run, p *TrialPlan, t *TrialRecord) {
 			set.Set(t.Given.Setting)
 		}
 		proc.Record(max(t.Correct, 0))
+		r.decider = proc
 	}
 	if spec.BreakEvery > 0 && b.sinceBreak >= spec.BreakEvery {
 		b.breakDue = true

@@ -9,6 +9,7 @@ import (
 	"strconv"
 
 	"distal/experiments/display"
+	"distal/experiments/procedure"
 	"distal/experiments/random"
 	"distal/experiments/study"
 )
@@ -44,6 +45,7 @@ type Run struct {
 	next     *TrialPlan
 	redo     *TrialPlan // an interrupted trial, to be asked again
 	progress float64
+	decider  procedure.Procedure
 
 	show stage
 }
@@ -316,9 +318,14 @@ func (r *Run) applyTrial(p *TrialPlan, t *TrialRecord) error {
 	if t.Interrupted != "" && t.Interrupted != DroppedFrame {
 		r.redo = p
 	}
+	r.decider = nil
 	r.block.record(r, p, t)
 	return nil
 }
+
+// Decider is the procedure that took the trial applied last, as that trial left
+// it; nil if the trial told no procedure anything.
+func (r *Run) Decider() procedure.Procedure { return r.decider }
 
 // compare says how a recorded trial differs from its plan, "" if it does not.
 func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {

@@ -32,6 +32,7 @@ type Threshold struct {
 	Fit         *psychometric.Result // nil if nothing could be fitted
 	Levels      []float64            // in the order of the trials
 	Correct     []bool               // right, or at a point of balance the answer Counted
+	Trials      []int                // their numbers in the run
 }
 
 // Thresholds fits every block and condition of a run that varies a level.
@@ -72,6 +73,7 @@ func fitOne(s *study.Study, b *study.Block, condition string, records []run.Reco
 		if t.Counted == "" && r.Correct < 0 {
 			continue
 		}
+		t.Trials = append(t.Trials, r.Trial)
 		t.Levels, t.Correct = append(t.Levels, r.Level), append(t.Correct, r.Correct == 1 || t.Counted != "" && r.Response == t.Counted)
 	}
 	if len(t.Levels) == 0 {

@@ -336,8 +336,10 @@ func (s *Service) run(c echo.Context, w who) error {
 	for i, metric := range quality.Metrics {
 		m.Measures = append(m.Measures, pages.Measure{Name: metric.Name, Value: text(measures[i], 3), Unit: metric.Unit, Doc: metric.Doc})
 	}
+	standings := decisions(b.Study, r, records)
 	for _, t := range quality.Thresholds(b.Study, records) {
 		m.Plots = append(m.Plots, psychometricPlot(t))
+		stand(&m.Plots[len(m.Plots)-1], t, standings)
 	}
 	fillRecords(records, &m)
 	for _, p := range quality.Phases(records) {

@@ -100,6 +100,15 @@ type RunPlot struct {
 	Points                            []Point
 	Predict                           func(x float64) float64
 	Threshold, Low, High              float64
+	Estimates                         []Standing // the procedure's own after each trial
+	Standing                          string     // what it says of itself at the end
+}
+
+// Standing is a procedure's estimate after a trial; Low and High are one standard
+// deviation away. It is not drawn while Known is false.
+type Standing struct {
+	Known                bool
+	Threshold, Low, High float64
 }
 
 // PhaseRow compares planned with shown stimuli of one task.

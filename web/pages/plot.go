@@ -242,6 +242,11 @@ func (r RunPlot) Trace() templ.Component {
 		}
 		fmt.Fprintf(&path, "%s%.1f %.1f", command, p.x.at(float64(i+1)), p.y.at(level))
 	}
+	for i, e := range r.Estimates {
+		if x := p.x.at(float64(i + 1)); e.Known {
+			p.printf(`<path class="standing" d="M%.1f %.1fV%.1fM%.1f %.1fH%.1f"/>`, x, p.y.at(e.Low), p.y.at(e.High), x-2, p.y.at(e.Threshold), x+2)
+		}
+	}
 	p.printf(`<path class="line" d="%s"/>`, path.String())
 	for i, level := range r.Levels {
 		class := "point"
