@@ -2,10 +2,11 @@
 // variance that any unbiased estimate of a threshold can have.
 //
 //	go run ./deploy/efficiency -runs 2000
+//	go run ./deploy/efficiency -converge    where staircases settle, against theory
 //
 // A simulated two-alternative observer with a Weibull function answers; its
 // threshold is uniform over the middle one of the two log units from the lowest
-// to the highest level. Efficiency is the bound, for an observer whose slope and
+// to the highest level, or with -outer over the two outer halves. Efficiency is the bound, for an observer whose slope and
 // lapse rate are known,
 //
 //	min P (1 − P) / (n P'²)
@@ -78,11 +79,16 @@ func (t *tally) add(e procedure.Estimate, truth float64) {
 }
 
 // simulate runs spec on o, whose true value is offset above the Weibull threshold.
-func simulate(spec procedure.Spec, o observer, offset float64, runs int) []tally {
+func simulate(spec procedure.Spec, o observer, offset float64, runs int, outer bool) []tally {
 	result := make([]tally, len(marks))
 	for r := range runs {
 		s := random.NewSub(20, uint32(r), random.PurposeObserver, 0)
 		threshold := -1.5 + (float64(r)+s.Float64())/float64(runs)
+		if outer && threshold < -1 {
+			threshold -= 0.5
+		} else if outer {
+			threshold += 0.5
+		}
 		p := procedure.New(spec, random.NewSub(20, uint32(r), random.PurposeProcedure, 0))
 		for m := 0; m < len(marks); {
 			x, _ := p.Next()
@@ -104,7 +110,24 @@ func quest(slopes, lapses []float64) procedure.Spec {
 	return procedure.Spec{
 		Method: procedure.QuestPlus, Min: 0.01, Max: 1, MaxTrials: 1000, LevelCount: 60,
 		ThresholdMin: 0.01, ThresholdMax: 1, ThresholdCount: 80, Slopes: slopes, Lapses: lapses, Guess: 0.5, Nuisance: true,
+		Prior: procedure.Middle,
 	}
+}
+
+// named is a method with its published settings, as a study file has them that
+// names the method and the range alone.
+func named(m procedure.Method, prior procedure.Prior) procedure.Spec {
+	s := quest(nil, nil)
+	s.Method, s.Prior, s.PriorSDLog10 = m, prior, 0.5
+	s.FillModel()
+	return s
+}
+
+// sure is the known observer placed by entropy: there is no slope to keep trials from.
+func sure(o observer) procedure.Spec {
+	s := quest([]float64{o.slope}, []float64{o.lapse})
+	s.Place, s.LevelCount, s.ThresholdCount = procedure.Entropy, 80, 120
+	return s
 }
 
 func staircase(down int, ratio float64) procedure.Spec {
@@ -119,7 +142,13 @@ func main() {
 	slope := flag.Float64("slope", 3.5, "of the observer")
 	lapse := flag.Float64("lapse", 0.02, "of the observer")
 	only := flag.String("only", "", "rows whose name contains this text")
+	converge := flag.Bool("converge", false, "print where staircases settle")
+	outer := flag.Bool("outer", false, "thresholds in the outer halves of the range, which the default prior takes for unlikely")
 	flag.Parse()
+	if *converge {
+		printConvergence(*runs)
+		return
+	}
 	o := observer{*slope, *lapse}
 	w := tabwriter.NewWriter(os.Stdout, 0, 0, 2, ' ', tabwriter.AlignRight)
 	fmt.Fprintln(w, "procedure\ttrials\tefficiency\t± s.e.\tbias %\t95 % covers\tno estimate\t")
@@ -128,23 +157,27 @@ func main() {
 		spec   procedure.Spec
 		offset float64
 	}{
-		{"QUEST+, slope and lapse known", quest([]float64{o.slope}, []float64{o.lapse}), 0},
+		{"QUEST+, slope and lapse known", sure(o), 0},
 		{"QUEST+, both unknown (default)", quest(procedure.DefaultSlopes(), procedure.DefaultLapses()), 0},
+		{"QUEST", named(procedure.Quest, procedure.Normal), 0},
+		{"Psi", named(procedure.Psi, procedure.Uniform), 0},
+		{"Psi, marginal", named(procedure.PsiMarginal, procedure.Uniform), 0},
 		{"2 down 1 up", staircase(2, 1), o.at(procedure.Target(staircase(2, 1)))},
 		{"3 down 1 up", staircase(3, 1), o.at(procedure.Target(staircase(3, 1)))},
+		{"4 down 1 up", staircase(4, 1), o.at(procedure.Target(staircase(4, 1)))},
 		{"1 down 1 up, weighted 1:3", staircase(1, 1.0/3), o.at(procedure.Target(staircase(1, 1.0/3)))},
 		{"3 down 1 up, ratio 0.7393", staircase(3, 0.7393), o.at(procedure.Target(staircase(3, 0.7393)))},
 	} {
 		if !strings.Contains(row.name, *only) {
 			continue
 		}
-		for i, t := range simulate(row.spec, o, row.offset, *runs) {
+		for i, t := range simulate(row.spec, o, row.offset, *runs, *outer) {
 			n := float64(t.n)
 			mse := t.square / n
 			efficiency := o.bound() / float64(marks[i]) / mse
 			error := efficiency * math.Sqrt(max(0, t.fourth/n-mse*mse)/n) / mse
 			covers := "–" // a staircase claims no interval
-			if row.spec.Method == procedure.QuestPlus {
+			if row.spec.Method.Bayesian() {
 				covers = strconv.FormatFloat(t.within/n, 'f', 3, 64)
 			}
 			fmt.Fprintf(w, "%s\t%d\t%.3f\t%.3f\t%+.2f\t%s\t%.3f\t\n", row.name, marks[i], efficiency, error,
