@@ -28,7 +28,7 @@ func TestInvitedInGerman(t *testing.T) {
 	page := l.url + "/studies/" + l.study.ID.String()
 	w.do(chromedp.Navigate(link))
 	w.click("sign-in")
-	w.see("study-motion-coherence")
+	w.see("study-short-walk")
 	w.do(chromedp.Navigate(page))
 	invite := func(n int) (links []string) {
 		t.Helper()
@@ -91,7 +91,7 @@ func TestInvitedInGerman(t *testing.T) {
 	}
 	w.do(chromedp.Navigate(link))
 	w.click("sign-in")
-	w.see("study-motion-coherence")
+	w.see("study-short-walk")
 	w.do(chromedp.Navigate(page))
 	invite(2)
 	var second string

@@ -60,40 +60,29 @@ func (h *hurdle) ServeHTTP(w http.ResponseWriter, r *http.Request) {
 	_, _ = w.Write(body)
 }
 
-// startPages starts a lab whose study has every kind of page and few trials,
-// and is changed further before its launch.
-func startPages(t *testing.T, changes ...func(*study.Study)) (*lab, *hurdle, string) {
-	t.Helper()
-	l := startLab(t, "motion-coherence")
-	s := *l.spec
+// withEveryPage gives a study every kind of page and few trials.
+func withEveryPage(s *study.Study) {
 	s.About.Name = "short-walk"
 	s.Screen.MaxJitterMs, s.Screen.MaxDroppedPercent, s.Screen.MinRefreshHz = 50, 100, 20 // the machine is busy with other tests
 	s.Screen.DistanceRepeats, s.Screen.CardRepeats = 3, 3
-	s.Tasks = append([]study.Task(nil), s.Tasks...)
 	s.Tasks[0].ResponseWindowMs = 0
-	s.Blocks = append([]study.Block(nil), s.Blocks...)
 	s.Blocks[0].Practice = study.Criterion{Correct: 1, Window: 1, MaxTrials: 1, Otherwise: study.GoOn}
 	s.Blocks[1].Catch, s.Blocks[1].BreakEvery = study.Catch{}, 3
-	s.Procedures = append([]study.ProcedureSpec(nil), s.Procedures...)
 	s.Procedures[0].MaxTrials = 6
 	both := func(en, de string) []study.LocalText {
 		return []study.LocalText{{Language: "en", Text: en}, {Language: "de", Text: de}}
 	}
-	s.Questions = append(append([]study.Question(nil), s.Questions...),
+	s.Questions = append(s.Questions,
 		study.Question{Name: "screen-age", Type: study.NumberQuestion, Ask: both("How old is your screen?", "Wie alt ist Ihr Bildschirm?"), Min: 0, Max: 40, Unit: "years"},
 		study.Question{Name: "hand", Type: study.ChoiceQuestion, Ask: both("Which hand answered?", "Mit welcher Hand haben Sie geantwortet?"),
 			Options: []study.Option{{Name: "left", Label: both("the left hand", "mit der linken")}, {Name: "right", Label: both("the right hand", "mit der rechten")}}})
-	for _, change := range changes {
-		change(&s)
-	}
-	id, err := l.app.workspace.Launch(context.Background(), l.id, l.admin, &s)
-	if err != nil {
-		t.Fatal(err)
-	}
-	l.spec = &s
-	if l.study, err = l.app.store.FindStudy(context.Background(), l.id, id); err != nil {
-		t.Fatal(err)
-	}
+}
+
+// startPages starts a lab whose study has every kind of page and few trials,
+// and is changed further before its launch.
+func startPages(t *testing.T, changes ...func(*study.Study)) (*lab, *hurdle, string) {
+	t.Helper()
+	l := startLab(t, "motion-coherence", append([]func(*study.Study){withEveryPage}, changes...)...)
 	h := &hurdle{server: l.app.echo}
 	server := httptest.NewServer(h)
 	t.Cleanup(server.Close)

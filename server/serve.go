@@ -74,6 +74,7 @@ func localOrigin(l net.Listener) string {
 // app is the server with everything wired.
 type app struct {
 	store     *store.Store
+	people    *participation.Service
 	ring      *site.Ring
 	tokens    access.Tokens
 	workspace *workspace.Service
@@ -101,9 +102,9 @@ func (c *connection) newApp(s *store.Store, origin string) (*app, error) {
 	a.tokens = access.Tokens{Keys: a.ring, Issuer: "distal", Now: time.Now}
 	secure := u.Scheme == "https"
 	a.workspace = &workspace.Service{Store: s, Tokens: a.tokens, Keys: a.ring, Assets: assets, Origin: origin, Secure: secure, Log: a.log, Now: time.Now}
-	participants := &participation.Service{Store: s, Tokens: a.tokens, Assets: assets, Secure: secure, Completed: a.judge}
+	a.people = &participation.Service{Store: s, Tokens: a.tokens, Assets: assets, Secure: secure, Completed: a.judge}
 	a.echo = site.New(a.log, a.workspace.ErrorPage, secure)
-	participants.Routes(a.echo)
+	a.people.Routes(a.echo)
 	a.workspace.Routes(a.echo)
 	a.echo.GET("/healthz", func(c echo.Context) error {
 		if err := s.Ping(c.Request().Context()); err != nil {

@@ -40,6 +40,9 @@ type Service struct {
 	Secure bool                 // cookies over https only
 	// Completed is called after a run has been completed.
 	Completed func(lab, study, run uuid.UUID)
+	// Seed is that of every run, as 16 hexadecimal digits, so that a test can be
+	// repeated; "" has each run draw its own.
+	Seed string
 
 	bundles sync.Map // digest → *bundle.Bundle: bundles never change
 }
@@ -302,7 +305,7 @@ func (s *Service) createRun(c echo.Context) error {
 	if err != nil {
 		return err
 	}
-	n := store.NewRun{Study: st.ID, ParticipantKey: device, CreationKey: creationKey, Browser: browser(c.Request().UserAgent())}
+	n := store.NewRun{Study: st.ID, ParticipantKey: device, CreationKey: creationKey, Seed: s.Seed, Browser: browser(c.Request().UserAgent())}
 	if request.Invitation != nil {
 		if n.Invitation, err = s.invited(c, lab, st.ID, *request.Invitation); err != nil {
 			return err
