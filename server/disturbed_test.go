@@ -76,6 +76,9 @@ func TestDisturbedTrials(t *testing.T) {
 	if last.Interrupted != "" || last.Response == "" || last.ResponseMs < 2500 || last.ResponseMs > 20000 {
 		t.Errorf("after the clock was set: %q, response %q after %g ms", last.Interrupted, last.Response, last.ResponseMs)
 	}
+	if last.InputDelayMs < 0.01 || last.InputDelayMs > 1000 {
+		t.Errorf("the answer was handled %g ms after its event", last.InputDelayMs)
+	}
 	for range 200 {
 		if _, records, _ := w.state(); hasEvent(records, "clock_set") {
 			break

@@ -108,6 +108,7 @@ func (f *fields) trial() *TrialRecord {
 	if _, ok := f.v.Get("interval_order"); ok {
 		t.Order = f.text("interval_order")
 	}
+	t.InputDelayMs = f.optional("input_delay_ms")
 	t.Given = f.given(true)
 	return t
 }
@@ -185,6 +186,14 @@ func (f *fields) numberOrNull(key string) float64 {
 		return math.NaN()
 	}
 	return f.number(key)
+}
+
+// optional is a number above 0, or 0 where it is left out.
+func (f *fields) optional(key string) float64 {
+	if _, ok := f.v.Get(key); !ok {
+		return 0
+	}
+	return f.positive(key)
 }
 
 func (f *fields) textOrNull(key string) string {
@@ -359,6 +368,9 @@ func (o *object) trial(t *TrialRecord) {
 		number("stimulus_frames", float64(t.StimulusSteps)).text("frame_steps", EncodeSteps(t.Steps)).
 		put("intervals_ms", value.Numbers(t.IntervalsMs)).number("dropped_frames", float64(t.Dropped)).
 		number("jitter_ms", t.JitterMs).text("digest", t.Digest).text("interrupted", t.Interrupted)
+	if t.InputDelayMs > 0 {
+		o.number("input_delay_ms", t.InputDelayMs)
+	}
 	if t.Order != "" {
 		o.text("interval_order", t.Order)
 	}

@@ -133,6 +133,7 @@ type TrialRecord struct {
 	IntervalsMs   []float64 // "intervals_ms": times between these frames, 0.01 ms
 	Dropped       int       // "dropped_frames": refreshes missed in the stimulus phase
 	JitterMs      float64   // "jitter_ms"
+	InputDelayMs  float64   // "input_delay_ms": from the answer's event to its handling by the page, at least 0.01; 0 (left out) if not told
 	Digest        string    // "digest": 16 hex digits over the display lists of all presented stimulus frames
 	Interrupted   string    // "interrupted": "" or what spoiled the trial (hidden, resized, context_lost, escape, DroppedFrame …); such a trial counts for nothing and is asked again
 

@@ -258,15 +258,16 @@ func (r *Run) Digest() string {
 
 // Measurement is what the browser measured in a trial.
 type Measurement struct {
-	Response    string // name of the choice, "" if none came in time
-	ResponseMs  float64
-	Input       string
-	OnsetMs     float64
-	OffsetMs    float64
-	Steps       []int
-	IntervalsMs []float64
-	Interrupted string
-	Given       *Given // of answers that are more than a choice
+	Response     string // name of the choice, "" if none came in time
+	ResponseMs   float64
+	InputDelayMs float64 // 0 if not told
+	Input        string
+	OnsetMs      float64
+	OffsetMs     float64
+	Steps        []int
+	IntervalsMs  []float64
+	Interrupted  string
+	Given        *Given // of answers that are more than a choice
 }
 
 // FinishTrial joins the plan with what was measured to the trial's record; nil
@@ -282,7 +283,7 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 		Block: spec.Name, Trial: p.Number, Track: p.Track, Practice: p.Practice, Catch: p.Catch,
 		Task: task.Name, Display: r.study.Displays[p.Display].Name, Condition: p.Condition,
 		Keys: p.Keys, Values: p.Values, Level: p.Level, TruthKeys: r.show.keys, Truths: r.show.truths,
-		Response: m.Response, Correct: rightness(task, p, m.Response, m.Interrupted), ResponseMs: m.ResponseMs, Input: m.Input,
+		Response: m.Response, Correct: rightness(task, p, m.Response, m.Interrupted), ResponseMs: m.ResponseMs, Input: m.Input, InputDelayMs: m.InputDelayMs,
 		OnsetMs: m.OnsetMs, OffsetMs: m.OffsetMs, RefreshMs: p.RefreshMs,
 		FixationSteps: p.FixationFrames, StimulusSteps: p.StimulusFrames,
 		Steps: m.Steps, IntervalsMs: m.IntervalsMs, Digest: r.Digest(), Interrupted: m.Interrupted,

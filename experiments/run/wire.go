@@ -49,6 +49,7 @@ func DecodeMeasurement(v value.Value) (Measurement, error) {
 		}
 		m.Steps = append(m.Steps, int(x))
 	}
+	m.InputDelayMs = f.optional("input_delay_ms")
 	m.Given = f.given(false)
 	f.strict()
 	return m, f.err

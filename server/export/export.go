@@ -342,6 +342,12 @@ func trialColumns() []column[trialRow] {
 			return strconv.Itoa(r.t.Correct)
 		}},
 		{"rt_ms", "ms", "from stimulus onset to the response event's own time", "no response", func(r trialRow) string { return number(r.t.ResponseMs) }},
+		{"input_delay_ms", "ms", "from the answer's event to its handling by the page", "no response by an event, or not told", func(r trialRow) string {
+			if r.t.InputDelayMs == 0 {
+				return ""
+			}
+			return number(r.t.InputDelayMs)
+		}},
 		{"input", "", "keyboard, pointer or touch", "no response", func(r trialRow) string { return r.t.Input }},
 		{"onset_ms", "ms", "page clock of the frame that first showed the stimulus; light appears later by a delay that browsers cannot measure", "never shown", func(r trialRow) string { return number(r.t.OnsetMs) }},
 		{"offset_ms", "ms", "page clock of the first frame without the stimulus", "never shown", func(r trialRow) string { return number(r.t.OffsetMs) }},

@@ -8,6 +8,7 @@ import (
 	"slices"
 
 	"distal/experiments/run"
+	"distal/experiments/study"
 )
 
 // Metric is one measure of a run's quality. Missing values are NaN.
@@ -158,6 +159,12 @@ func right(r *run.TrialRecord) bool      { return r.Correct == 1 }
 func answered(r *run.TrialRecord) bool   { return r.Response != "" }
 func unanswered(r *run.TrialRecord) bool { return r.Response == "" }
 
+// chosen tells whether the response is one of a task's choices, not a direction, a
+// setting or a time of holding.
+func chosen(r *run.TrialRecord) bool {
+	return r.Response != "" && (r.Given == nil || !slices.Contains(study.Said, r.Response))
+}
+
 // fastMs is the shortest response time that a choice can take.
 const fastMs = 150 // common practice, no source
 
@@ -212,7 +219,7 @@ func longestRow(list []*run.TrialRecord) float64 {
 	longest, row, last := 0, 0, ""
 	for _, r := range list {
 		switch {
-		case r.Response == "":
+		case !chosen(r):
 			continue
 		case r.Response == last:
 			row++
@@ -227,7 +234,7 @@ func longestRow(list []*run.TrialRecord) float64 {
 func commonest(list []*run.TrialRecord) float64 {
 	counts, n := map[string]int{}, 0
 	for _, r := range list {
-		if r.Response != "" {
+		if chosen(r) {
 			counts[r.Response]++
 			n++
 		}

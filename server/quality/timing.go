@@ -31,6 +31,14 @@ var timingMetrics = []Metric{
 	{"refresh_drift_percent", "%", "largest difference between the median frame interval of a block and the refresh interval of the display check before it", func(t trials) float64 {
 		return largest(drifts(t.main))
 	}},
+	{"input_delay_ms", "ms", "median time from the event of an answer to its handling by the page: the part of the input latency that a browser can tell; what keyboard and system add before is not in it", func(t trials) float64 {
+		return median(pick(t.main, func(r *run.TrialRecord) float64 {
+			if r.InputDelayMs == 0 {
+				return math.NaN()
+			}
+			return r.InputDelayMs
+		}))
+	}},
 	{"response_clock_ms", "ms", "steps in which the browser gave the times of key presses and clicks: response times are no finer", func(t trials) float64 {
 		return clockStep(pick(t.main, func(r *run.TrialRecord) float64 { return r.OnsetMs + r.ResponseMs }))
 	}},

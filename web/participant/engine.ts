@@ -72,6 +72,8 @@ export interface Measurement {
   intervals_ms: number[];
   /** "" or the event that broke the trial. */
   interrupted: string;
+  /** From the answer's event to its handling by the page, at least 0.01; left out without an answer by event. */
+  input_delay_ms?: number;
   /** Of tasks in which an answer is more than a choice. */
   given?: Given;
 }

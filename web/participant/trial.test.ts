@@ -90,6 +90,7 @@ test("shows fixation, stimulus and waits for the answer", async () => {
   assert.deepEqual(m.frame_steps, [1, 1, 1]);
   assert.equal(m.onset_ms, Math.round((1000 + 3 * t.period) * 100) / 100);
   assert.equal(m.rt_ms, 55); // three frames of 16.667 ms and 5 ms
+  assert.ok(m.input_delay_ms! >= 0.01);
   assert.equal(m.interrupted, "");
   assert.ok(t.clock.idle, "no frame is asked for after the end");
 });

@@ -125,6 +125,7 @@ class Runner {
   private handle = 0;
   private response = -1;
   private responseAt = NaN;
+  private delay = 0; // ms from the answer's event to its handling
   private input: Measurement["input"] = "";
   private readonly reply: Reply | null;
   private askedAt = NaN; // the scale of confidence
@@ -298,6 +299,7 @@ class Runner {
     if (window > 0 && at - times[0]! > window) return;
     this.response = choice;
     this.responseAt = at;
+    this.delay = Math.max(0.01, hundredth(this.stage.clock.now() - at));
     this.input = input;
   }
 
@@ -332,6 +334,7 @@ class Runner {
       frame_steps: Array.from(steps.subarray(0, this.frames)),
       intervals_ms: intervals,
       interrupted: this.interrupted,
+      ...(answered && this.delay > 0 ? { input_delay_ms: this.delay } : {}),
       ...(this.reply ? { given: this.whatWasGiven(answered) } : {}),
     });
   }
