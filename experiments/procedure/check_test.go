@@ -15,6 +15,7 @@ func TestCheck(t *testing.T) {
 	quest := procedure.Spec{Method: procedure.QuestPlus, Min: 0.01, Max: 1, MaxTrials: 80, ThresholdMin: 0.01, ThresholdMax: 1,
 		ThresholdCount: 40, Slopes: []float64{2, 4}, Lapses: []float64{0.02}, Guess: 0.5, LevelCount: 40}
 	constant := procedure.Spec{Method: procedure.Constant, Min: 0.01, Max: 1, MaxTrials: 80, Levels: []float64{0.1, 0.2}, Repetition: 10}
+	limits := procedure.Spec{Method: procedure.Limits, Min: 0.01, Max: 1, MaxTrials: 80, StepsUp: []float64{0.1}, Reversals: 6, EasierIs: 1}
 	tests := []struct {
 		name   string
 		base   procedure.Spec
@@ -48,6 +49,20 @@ func TestCheck(t *testing.T) {
 		}, "threshold_count", "cells"},
 		{"OneLevel", quest, func(s *procedure.Spec) { s.LevelCount = 1 }, "level_count", "at least 2"},
 		{"NoSlopes", quest, func(s *procedure.Spec) { s.Slopes = nil }, "slopes", "at least one"},
+		{"KeepSlopeElsewhere", quest, func(s *procedure.Spec) { s.KeepSlope = true }, "keep_slope", "psi_marginal"},
+		{"EntropyAtOnce", quest, func(s *procedure.Spec) { s.StopEntropyBits = 5.4 }, "stop_entropy_bits", "at most 5.3219 bits"},
+		{"NormalOutside", quest, func(s *procedure.Spec) { s.Prior, s.PriorMean, s.PriorSDLog10 = procedure.Normal, 2, 1 }, "prior_mean", "outside"},
+		{"Second", quest, func(s *procedure.Spec) { s.Second, s.SecondLevels, s.Gradients = "x", []float64{1, 2}, []float64{0} }, "", ""},
+		{"SecondLevelsMissing", quest, func(s *procedure.Spec) { s.Second = "x" }, "second_levels", "at least 2 levels of x"},
+		{"SecondNameless", quest, func(s *procedure.Spec) { s.SecondLevels = []float64{1, 2} }, "second_parameter", "name the parameter"},
+		{"SecondTheSame", quest, func(s *procedure.Spec) { s.Parameter, s.Second, s.SecondLevels = "x", "x", []float64{1, 2} }, "second_parameter", "varied already"},
+		{"SecondByMode", quest, func(s *procedure.Spec) { s.Second, s.SecondLevels, s.Place = "x", []float64{1, 2}, procedure.Mode }, "place", "which of its levels"},
+		{"SecondOfStaircase", staircase, func(s *procedure.Spec) { s.Second = "x" }, "second_parameter", "only quest_plus"},
+		{"Limits", limits, func(*procedure.Spec) {}, "", ""},
+		{"LimitsTwoSteps", limits, func(s *procedure.Spec) { s.StepsUp = []float64{0.1, 0.2} }, "steps", "one step"},
+		{"LimitsFewSteps", limits, func(s *procedure.Spec) { s.StepsUp = []float64{1} }, "steps", "2 steps fit"},
+		{"LimitsNoSeries", limits, func(s *procedure.Spec) { s.Reversals = 0 }, "reversals", "number of series"},
+		{"LimitsEasier", limits, func(s *procedure.Spec) { s.EasierIs = 0 }, "easier_is", "+1 or −1"},
 		{"Constant", constant, func(*procedure.Spec) {}, "", ""},
 		{"NoLevels", constant, func(s *procedure.Spec) { s.Levels = nil }, "levels", "needs levels"},
 		{"NoRepetitions", constant, func(s *procedure.Spec) { s.Repetition = 0 }, "repetitions", "trials per level"},

@@ -197,15 +197,21 @@ func checkEstimate(t *rapid.T, e procedure.Estimate) {
 }
 
 func anySpec(t *rapid.T) procedure.Spec {
+	method, steps := procedure.Method(rapid.IntRange(0, len(procedure.MethodNames)-1).Draw(t, "method")), []float64{0.2, 0.1}
+	if method == procedure.Limits {
+		steps = steps[:1]
+	}
 	return procedure.Spec{
-		Method: procedure.Method(rapid.IntRange(0, 2).Draw(t, "method")), Scale: procedure.Scale(rapid.IntRange(0, 1).Draw(t, "scale")),
+		Method: method, Scale: procedure.Scale(rapid.IntRange(0, 1).Draw(t, "scale")),
 		Min: 0.01, Max: 1, MinTrials: 5, MaxTrials: 40,
 		Levels: []float64{0.1, 0.2, 0.4, 0.8}, Repetition: 10,
 		Start: rapid.Float64Range(0.01, 1).Draw(t, "start"), Down: rapid.IntRange(1, 4).Draw(t, "down"), Up: 1,
-		StepsUp: []float64{0.2, 0.1}, StepRatio: rapid.Float64Range(0.2, 1).Draw(t, "ratio"), Reversals: rapid.IntRange(0, 8).Draw(t, "reversals"), EasierIs: rapid.SampledFrom([]int{-1, 1}).Draw(t, "easier"),
+		StepsUp: steps, StepRatio: rapid.Float64Range(0.2, 1).Draw(t, "ratio"), Reversals: rapid.IntRange(0, 8).Draw(t, "reversals"), EasierIs: rapid.SampledFrom([]int{-1, 1}).Draw(t, "easier"),
 		ThresholdMin: 0.01, ThresholdMax: 1, ThresholdCount: 20, Slopes: []float64{1, 2, 4},
 		Lapses: rapid.SampledFrom([][]float64{{0}, {0, 0.02}, {0.01}}).Draw(t, "lapses"),
 		Guess:  rapid.SampledFrom([]float64{0, 0.25, 0.5}).Draw(t, "guess"), LevelCount: 15,
 		StopSDLog10: rapid.SampledFrom([]float64{0, 0.1}).Draw(t, "stop"), Nuisance: rapid.Bool().Draw(t, "nuisance"),
+		Place: procedure.Place(rapid.IntRange(0, len(procedure.PlaceNames)-1).Draw(t, "place")), Prior: procedure.Prior(rapid.IntRange(0, len(procedure.PriorNames)-1).Draw(t, "prior")),
+		PriorMean: 0.1, PriorSDLog10: 0.3, StopEntropyBits: rapid.SampledFrom([]float64{0, 2}).Draw(t, "bits"),
 	}
 }
