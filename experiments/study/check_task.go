@@ -138,18 +138,24 @@ func (c *checker) answerParameter(t *Task, d *DisplaySpec) {
 	}
 }
 
-// judged checks that a block that needs right answers has a task that knows them.
+// judged checks that a block's procedure gets from the task what it decides by.
 func (c *checker) judged(i int, b *Block, t *Task) {
+	var method procedure.Method = -1
+	name := ""
+	if b.Procedure >= 0 {
+		p := &c.s.Procedures[b.Procedure]
+		method, name = p.Method, p.Name
+		if method == procedure.Adjustment && (t.Answer.By != ByAdjustment || t.Answer.Parameter != p.Parameter) {
+			c.fail("procedure "+name+" begins adjustments of "+p.Parameter+": the task needs answer: {by: adjustment, parameter: "+p.Parameter+", …}", "blocks", i, "procedure")
+		}
+	}
 	if t.Answer.By == ByChoice {
 		return
 	}
 	if b.Practice.Correct > 0 {
 		c.fail("no answer by "+AnswerNames[t.Answer.By]+" is right or wrong, so the criterion can never be met: give trials instead", "blocks", i, "criterion")
 	}
-	if b.Procedure < 0 {
-		return
-	}
-	if m := c.s.Procedures[b.Procedure].Method; m == procedure.Staircase || m == procedure.QuestPlus {
-		c.fail("procedure "+c.s.Procedures[b.Procedure].Name+" needs right and wrong answers, and an answer by "+AnswerNames[t.Answer.By]+" is neither", "blocks", i, "procedure")
+	if method >= 0 && method != procedure.Constant && method != procedure.Adjustment {
+		c.fail("procedure "+name+" needs right and wrong answers, and an answer by "+AnswerNames[t.Answer.By]+" is neither", "blocks", i, "procedure")
 	}
 }
