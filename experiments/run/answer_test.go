@@ -355,6 +355,49 @@ func TestGivenRefused(t *testing.T) {
 	}
 }
 
+// The procedure of adjustment says where each trial begins and gets its setting.
+func TestAdjustmentProcedure(t *testing.T) {
+	t.Parallel()
+	list := without("by: adjustment, parameter: coherence, min: 0.01, max: 1, scale: log10, coarse: 0.1, fine: 0.02")
+	for i := 0; i < len(list); i += 2 {
+		if list[i] == "    procedure: short\n" {
+			list[i+1] = list[i]
+		}
+	}
+	list = append(list, "    method: quest_plus\n", "    method: adjustment\n", "    max_trials: 5\n", "    max_trials: 4\n")
+	s := changed(t, list...)
+	for seed := range uint64(5) {
+		p := begin(t, s, run.Assignment{Seed: seed})
+		low, high, settings := 0, 0, 0
+		for step := p.run.Next(); step.Kind != run.StepDone; step = p.run.Next() {
+			if step.Kind != run.StepTrial {
+				p.apply(p.answer(step.Kind))
+				continue
+			}
+			m := run.Measurement{Response: "set", Steps: []int{1, 1}, IntervalsMs: []float64{16, 17}, Given: nothing()}
+			m.Given.AdjustFrames, m.Given.AdjustValues, m.Given.AdjustMs = []float64{1}, []float64{0.3}, []float64{20}
+			rec := p.show(m)
+			if step.Block == "short" {
+				if settings++; rec.Trial.Given.Start != rec.Trial.Level {
+					t.Fatalf("the setting begins at %v, the procedure says %v", rec.Trial.Given.Start, rec.Trial.Level)
+				}
+				if rec.Trial.Level < math.Sqrt(0.05) { // the middle of 0.05 to 1 on a log axis
+					low++
+				} else {
+					high++
+				}
+			}
+			p.apply(rec)
+		}
+		if settings != 4 || low != 2 || high != 2 {
+			t.Errorf("seed %d: %d settings, %d begun low, %d high", seed, settings, low, high)
+		}
+		if report := replay.Verify(s, run.Assignment{Seed: seed}, p.records); !report.OK() {
+			t.Errorf("%+v", report)
+		}
+	}
+}
+
 // Errors of pointing are signed, counter-clockwise, and go the short way round.
 func TestPointingError(t *testing.T) {
 	t.Parallel()
