@@ -14,7 +14,7 @@ export interface Panel {
 
 type Handler = (e: never) => void;
 
-const pressable = (text: string, test: string, down: (e: PointerEvent) => void, more: Record<string, Handler> = {}): HTMLElement =>
+const pressable = (text: string, test: string, down: (e: PointerEvent) => void, more: Record<string, Handler | string> = {}): HTMLElement =>
   h("button", { type: "button", class: "choice", test, tabindex: "-1", pointerdown: down as Handler, ...more }, text);
 
 /** What a task is answered with. */
@@ -25,7 +25,7 @@ export function answerPanel(task: Task, input: TrialInput, language: string): Pa
     case "dial":
       return dial(prompt, done(), input);
     case "adjustment":
-      return { turn: () => {}, elements: [prompt, pressable("−", "answer-less", (e) => input.step(-1, e)), pressable("+", "answer-more", (e) => input.step(1, e)), done()] };
+      return { turn: () => {}, elements: [prompt, pressable("−", "answer-less", (e) => input.step(-1, e), { "aria-label": say("answer_less") }), pressable("+", "answer-more", (e) => input.step(1, e), { "aria-label": say("answer_more") }), done()] };
     case "hold":
       return { turn: () => {}, elements: [prompt, holdButton(input)] };
   }
@@ -85,7 +85,7 @@ export function answerKeys(task: Task): [string, string[]][] {
     case "dial":
       return turn;
     case "adjustment":
-      return [[say("keys_change"), turn[0]![1]], ...turn.slice(1)];
+      return [[`${say("answer_less")}, ${say("answer_more")}`, turn[0]![1]], ...turn.slice(1)];
     case "hold":
       return [[say("answer_hold"), task.answer.keys]];
   }
