@@ -40,7 +40,16 @@ func (r *Run) present(p *TrialPlan, task *study.Task) {
 	if b := &r.study.Blocks[p.Block]; task.Answer.By == study.ByAdjustment && p.Track >= 0 && r.study.Procedures[b.Procedure].Parameter == task.Answer.Parameter {
 		p.Start = max(task.Answer.Min, min(task.Answer.Max, p.Level)) // the procedure says where it begins
 	}
-	p.CorrectChoice = task.RightAnswer(d, p.values, p.Order)
+	if task.ShufflePlaces {
+		p.Places = make([]int, len(task.Beside)+1)
+		s.Perm(p.Places)
+		for i, k := range p.Places {
+			if p.Places[i] = task.Display; k > 0 {
+				p.Places[i] = task.Beside[k-1]
+			}
+		}
+	}
+	p.CorrectChoice = task.RightAnswer(d, p.values, p.Order, r.placeName(p))
 	p.Feedback = p.Feedback && (p.CorrectChoice >= 0 || task.Answer.By == study.ByChoice && len(p.Order) == 0)
 }
 
@@ -56,6 +65,14 @@ func start(a *study.Answer, s *random.Stream) float64 {
 		return max(a.Min, min(a.Max, float64(a.Min*exact.Pow(a.Max/a.Min, u))))
 	}
 	return max(a.Min, min(a.Max, a.Min+float64((a.Max-a.Min)*u)))
+}
+
+// placeName is the display at whose place the trial's display stands, "" where it has its own.
+func (r *Run) placeName(p *TrialPlan) string {
+	if len(p.Places) == 0 {
+		return ""
+	}
+	return r.study.Displays[p.Places[0]].Name
 }
 
 // orderText names what each interval is.

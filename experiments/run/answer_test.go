@@ -53,10 +53,12 @@ func variants(t testing.TB) map[string]*study.Study {
 		"same":         changed(t, pair("same_different", "reference: {speed_deg_per_s: 8}", "means: same", "means: different")...),
 		"reminder":     changed(t, pair("reminder", "reference: {coherence: 0}", "right_when: {direction_deg: 0}", "right_when: {direction_deg: 180}")...),
 		"less":         changed(t, pair("reminder", "reference: {speed_deg_per_s: 6}, compare: speed_deg_per_s", "means: more", "means: less")...),
-		"dial":         changed(t, append(without("by: dial, parameter: direction_deg"), sure...)...),
-		"adjustment":   changed(t, append(append(without("by: adjustment, parameter: speed_deg_per_s, min: 1, max: 20, scale: log10, coarse: 0.1, fine: 0.02"), long...), beside...)...),
-		"restarted":    changed(t, append(without("by: adjustment, parameter: lifetime_ms, min: 50, max: 500, coarse: 20, fine: 5"), long...)...),
-		"hold":         changed(t, append(append(without("by: hold"), long...), sure...)...),
+		"places": changed(t, append(slices.Clone(beside[:2]), "    fixation_ms: 300\n", "    fixation_ms: 300\n    beside: [other]\n    shuffle_places: true\n",
+			choicesOf, "      a: {keys: [ArrowLeft], label: {en: A}, at: field}\n      b: {keys: [ArrowRight], label: {en: B}, at: other}\n")...),
+		"dial":       changed(t, append(without("by: dial, parameter: direction_deg"), sure...)...),
+		"adjustment": changed(t, append(append(without("by: adjustment, parameter: speed_deg_per_s, min: 1, max: 20, scale: log10, coarse: 0.1, fine: 0.02"), long...), beside...)...),
+		"restarted":  changed(t, append(without("by: adjustment, parameter: lifetime_ms, min: 50, max: 500, coarse: 20, fine: 5"), long...)...),
+		"hold":       changed(t, append(append(without("by: hold"), long...), sure...)...),
 	}
 }
 
@@ -239,6 +241,45 @@ func TestFramesOfIntervals(t *testing.T) {
 	}
 	if full < 10 || firsts[0] == firsts[1] {
 		t.Errorf("%d dots, both intervals begin at %v", full, firsts)
+	}
+}
+
+// Displays change places at random, and the place of the task's own decides what is right.
+func TestPlaces(t *testing.T) {
+	t.Parallel()
+	s := variants(t)["places"]
+	own := 0
+	for seed := range uint64(100) {
+		p := begin(t, s, run.Assignment{Seed: seed})
+		plan := p.untilKind(run.StepTrial).Trial
+		p.run.BeginTrial()
+		l := p.run.Frame(0)
+		x := 0.0 // of the dots but the last, which is the fixation mark
+		for _, d := range l.Dots[:len(l.Dots)-1] {
+			x += float64(d.XDeg) / float64(len(l.Dots)-1)
+		}
+		place, dots, grating := []string{"a", "b"}[plan.CorrectChoice], 0.0, float32(-2)
+		if place == "a" {
+			own++
+		} else {
+			dots, grating = -2, 0
+		}
+		// The mean of 14 dots within a circle of radius 3 has a standard deviation of 0.4.
+		if math.Abs(x-dots) > 1.9 || l.Patches[0].XDeg != grating {
+			t.Fatalf("seed %d: %s is right, dots about %v, grating at %v", seed, place, x, l.Patches[0].XDeg)
+		}
+		rec := p.trial("a", "")
+		if rec.Trial.Place != map[string]string{"a": "field", "b": "other"}[place] {
+			t.Fatalf("place %q", rec.Trial.Place)
+		}
+		changed := *rec.Trial
+		changed.Place = map[string]string{"field": "other", "other": "field"}[changed.Place]
+		if err := p.try(run.Record{Kind: run.KindTrial, Trial: &changed}); err == nil {
+			t.Error("another place was accepted")
+		}
+	}
+	if own < 25 || own > 75 { // five standard deviations
+		t.Errorf("%d of 100 at its own place", own)
 	}
 }
 

@@ -109,6 +109,9 @@ func (f *fields) trial() *TrialRecord {
 		t.Order = f.text("interval_order")
 	}
 	t.InputDelayMs = f.optional("input_delay_ms")
+	if _, ok := f.v.Get("place"); ok {
+		t.Place = f.text("place")
+	}
 	t.Given = f.given(true)
 	return t
 }
@@ -373,6 +376,9 @@ func (o *object) trial(t *TrialRecord) {
 	}
 	if t.Order != "" {
 		o.text("interval_order", t.Order)
+	}
+	if t.Place != "" {
+		o.text("place", t.Place)
 	}
 	if t.Given != nil {
 		o.put("given", t.Given.encode())

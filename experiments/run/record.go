@@ -138,6 +138,7 @@ type TrialRecord struct {
 	Interrupted   string    // "interrupted": "" or what spoiled the trial (hidden, resized, context_lost, escape, DroppedFrame …); such a trial counts for nothing and is asked again
 
 	Order string // "interval_order": "test reference" and the like where there are two intervals, otherwise "" and not written
+	Place string // "place": display at whose place this one was shown where places are shuffled, otherwise "" and not written
 	Given *Given // "given": of answers that are more than a choice, otherwise nil and not written
 }
 

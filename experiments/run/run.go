@@ -345,8 +345,8 @@ func (r *Run) compare(p *TrialPlan, t *TrialRecord) string {
 		return "the values differ"
 	case t.RefreshMs != p.RefreshMs || t.StimulusSteps != p.StimulusFrames || t.FixationSteps != p.FixationFrames:
 		return "the refresh interval or the planned frames differ"
-	case t.Order != orderText(p.Order):
-		return "the order of the intervals differs"
+	case t.Order != orderText(p.Order) || t.Place != r.placeName(p):
+		return "the order of the intervals or the place differs"
 	case t.Response != "" && choiceIndex(task, t.Response) < 0 && t.Response != study.Said[task.Answer.By]:
 		return "there is no choice " + strconv.Quote(t.Response)
 	case t.Correct != rightness(task, p, t.Response, t.Interrupted):

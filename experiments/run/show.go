@@ -93,14 +93,18 @@ func (s *stage) present(k int) {
 	if len(p.Order) > 0 && !p.Order[k] {
 		values = p.reference
 	}
-	s.prepare(p.Display, values, k)
+	s.prepare(p.Display, 0, values, k)
 	for i, b := range s.study.Tasks[p.Task].Beside {
-		s.prepare(b, p.beside[i], 2*i+2+k)
+		s.prepare(b, i+1, p.beside[i], 2*i+2+k)
 	}
 }
 
-func (s *stage) prepare(d int, values display.Values, place int) {
+// prepare begins display d, which is number n of the task's.
+func (s *stage) prepare(d, n int, values display.Values, place int) {
 	spec := &s.study.Displays[d]
+	if len(s.plan.Places) > 0 {
+		spec = &s.study.Displays[s.plan.Places[n]]
+	}
 	s.displays[d].Begin(display.Trial{
 		Values: values, Seed: s.seed, Number: uint32(s.plan.Number), IntervalMs: s.plan.RefreshMs, XDeg: spec.XDeg, YDeg: spec.YDeg, Place: uint32(place),
 	})
@@ -129,7 +133,7 @@ func (r *Run) Adjust(x float64) {
 	}
 	// It goes on as if it had had this setting from onset.
 	s.own[i][0] = x
-	s.prepare(s.plan.Display, s.own, 0)
+	s.prepare(s.plan.Display, 0, s.own, 0)
 	if s.began {
 		d.Step(0, s.list)
 		s.list.Reset()
@@ -287,7 +291,7 @@ func (r *Run) FinishTrial(m Measurement) *TrialRecord {
 		OnsetMs: m.OnsetMs, OffsetMs: m.OffsetMs, RefreshMs: p.RefreshMs,
 		FixationSteps: p.FixationFrames, StimulusSteps: p.StimulusFrames,
 		Steps: m.Steps, IntervalsMs: m.IntervalsMs, Digest: r.Digest(), Interrupted: m.Interrupted,
-		Order: orderText(p.Order), Given: m.Given,
+		Order: orderText(p.Order), Place: r.placeName(p), Given: m.Given,
 	}
 	if m.Response == "" {
 		t.ResponseMs = math.NaN()

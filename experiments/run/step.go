@@ -63,6 +63,10 @@ type TrialPlan struct {
 	Order []bool
 	Start float64 // dial: direction of the needle at first; adjustment: first setting; otherwise NaN
 
+	// Places are, for the task's display and those beside it, the displays at whose
+	// places they stand; nil where each has its own.
+	Places []int
+
 	values         display.Values   // all parameters of the display
 	reference      display.Values   // those of the reference
 	beside         []display.Values // those of the task's displays beside

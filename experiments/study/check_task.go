@@ -17,6 +17,7 @@ func (c *checker) answering(t *Task) {
 			}
 		}
 	}
+	c.places(t)
 	c.intervals(t)
 	c.meanings(t)
 	c.answer(t)
@@ -29,6 +30,36 @@ func (c *checker) answering(t *Task) {
 	c.sentences(t.Confidence.Ask, "tasks", t.Name, "confidence", "ask")
 	c.sentences(t.Confidence.LowEnd, "tasks", t.Name, "confidence", "low_end")
 	c.sentences(t.Confidence.HighEnd, "tasks", t.Name, "confidence", "high_end")
+}
+
+// places checks that each place that the task's display can have is said by one choice.
+func (c *checker) places(t *Task) {
+	if t.ShufflePlaces && len(t.Beside) == 0 {
+		c.fail("one display alone has no place to change with: name others in beside", "tasks", t.Name, "shuffle_places")
+	}
+	said := map[string]int{}
+	for i := range t.Choices {
+		ch := &t.Choices[i]
+		if ch.At == "" {
+			continue
+		}
+		said[ch.At]++
+		known := false
+		for _, d := range append([]int{t.Display}, t.Beside...) {
+			known = known || d >= 0 && d < len(c.s.Displays) && c.s.Displays[d].Name == ch.At
+		}
+		switch {
+		case !t.ShufflePlaces:
+			c.fail("displays keep their places unless the task says shuffle_places: true", "tasks", t.Name, "choices", ch.Name, "at")
+		case !known || said[ch.At] > 1:
+			c.fail("each display of the task is named by one choice, and "+quote(ch.At)+" is not", "tasks", t.Name, "choices", ch.Name, "at")
+		case len(ch.Correct) > 0 || ch.Means != NoMeaning:
+			c.fail("the place decides what is right: leave right_when and means out", "tasks", t.Name, "choices", ch.Name)
+		}
+	}
+	if len(said) > 0 && len(said) != len(t.Beside)+1 {
+		c.fail("each place needs a choice that names its display in at", "tasks", t.Name, "choices")
+	}
 }
 
 func (c *checker) intervals(t *Task) {

@@ -139,6 +139,7 @@ type Task struct {
 	Feedback         Feedback
 	Prompt           []LocalText
 	Beside           []int      // displays shown at the same time, with the values of the study
+	ShufflePlaces    bool       // they and the task's display change places at random
 	Intervals        Intervals  // more than one presentation
 	Answer           Answer     // other than by choice
 	Confidence       Confidence // asked after the answer
@@ -160,6 +161,7 @@ type Choice struct {
 	Label   []LocalText
 	Correct []Setting // e.g. direction_deg: 180
 	Means   Meaning   // what it says about the intervals
+	At      string    // the display at whose place the task's display is, if this is right
 }
 
 // Setting is a display parameter with a value.

@@ -99,6 +99,9 @@ type Confidence struct {
 // walkAnswering walks what a task has besides one display and choices.
 func walkAnswering(c *codec, t *Task, s *Study, d *DisplaySpec) {
 	c.rare(len(t.Beside) == 0, func() { walkBeside(c, t, s) })
+	c.rare(!t.ShufflePlaces, func() {
+		c.flag("shuffle_places", &t.ShufflePlaces, false, "the task's display and those beside it change places at random in each trial")
+	})
 	c.rare(t.Intervals.Design == OneInterval, func() {
 		c.group("intervals", false, "two presentations one after the other, stimulus_ms each", func(c *codec) {
 			i := &t.Intervals
@@ -155,8 +158,14 @@ func walkBeside(c *codec, t *Task, s *Study) {
 }
 
 // RightAnswer is the index of the choice that is right, −1 if none is. test are the
-// values of the trial, order tells for each interval whether it shows them.
-func (t *Task) RightAnswer(d *DisplaySpec, test display.Values, order []bool) int {
+// values of the trial, order tells for each interval whether it shows them, place
+// is the name of the display at whose place they are shown, "" where places stay.
+func (t *Task) RightAnswer(d *DisplaySpec, test display.Values, order []bool, place string) int {
+	for i := range t.Choices {
+		if place != "" && t.Choices[i].At == place {
+			return i
+		}
+	}
 	means := t.meaning(d, test, order)
 	if means == NoMeaning {
 		return t.RightChoice(d, test)

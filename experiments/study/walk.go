@@ -408,6 +408,9 @@ func walkTask(c *codec, t *Task, s *Study) {
 			c.rare(ch.Means == NoMeaning, func() {
 				oneOf(c, "means", &ch.Means, MeaningNames, NoMeaning, false, "what the answer says about the intervals, and so when it is right")
 			})
+			c.rare(ch.At == "", func() {
+				c.text("at", &ch.At, word{}, "name of the display at whose place the task's display is, if this is the right answer")
+			})
 		})
 	oneOf(c, "feedback", &t.Feedback, FeedbackNames, PracticeOnly, false, "right or wrong after the response")
 	c.sentence("prompt", &t.Prompt, false, "the question under the display, e.g. Which way did most dots move?")

@@ -360,6 +360,7 @@ func trialColumns() []column[trialRow] {
 		{"jitter_ms", "ms", "standard deviation of the intervals that were on time", "fewer than two", func(r trialRow) string { return number(r.t.JitterMs) }},
 		{"digest", "", "FNV-1a (64 bits) over the display lists of all presented stimulus frames, 16 hexadecimal digits", "", func(r trialRow) string { return r.t.Digest }},
 		{"interval_order", "", "what the two intervals were: test or reference", "one presentation", func(r trialRow) string { return r.t.Order }},
+		{"place", "", "display at whose place the trial's display was shown", "places are not shuffled", func(r trialRow) string { return r.t.Place }},
 		given("response_deg", "deg", "direction that was pointed in, counter-clockwise from rightwards", func(g *run.Given) float64 { return g.ResponseDeg }),
 		given("error_deg", "deg", "response_deg from the direction that was right, counter-clockwise, above −180 to 180", func(g *run.Given) float64 { return g.ErrorDeg }),
 		given("start", "the answer's", "direction (deg) or setting that the participant began with, drawn at random", func(g *run.Given) float64 { return g.Start }),
