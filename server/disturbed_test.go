@@ -142,19 +142,24 @@ func (w *walker) stored(n int) []*run.TrialRecord {
 func (w *walker) goOn() {
 	w.t.Helper()
 	for range 40 {
-		switch where := w.where(); where {
+		where := w.where()
+		switch where {
 		case "page-card":
 			w.card()
 		case "page-distance":
 			w.distance()
 		case "page-interrupted", "page-check", "page-break", "page-instructions":
 			w.click("continue")
-			w.do(chromedp.Sleep(200 * time.Millisecond))
 		default:
 			if strings.HasPrefix(where, "trial ") {
 				return
 			}
-			w.do(chromedp.Sleep(100 * time.Millisecond))
+		}
+		for range 20 { // until the page has changed, or stays: the check may be refused
+			if w.where() != where {
+				break
+			}
+			time.Sleep(50 * time.Millisecond)
 		}
 	}
 	w.t.Fatalf("no trial comes: %s", w.where())
