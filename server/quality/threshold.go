@@ -65,6 +65,10 @@ func fitOne(s *study.Study, b *study.Block, condition string, records []run.Reco
 		Block: b.Name, Condition: condition, Parameter: p.Parameter, Unit: kind.Params[kind.Index(p.Parameter)].Unit,
 		Linear: p.Spec.Scale == procedure.Linear, Counted: counted(task),
 	}
+	if task.Answer.By == study.ByAdjustment {
+		t.match(b, records)
+		return t
+	}
 	for i := range records {
 		r := records[i].Trial
 		if r == nil || r.Block != b.Name || r.Condition != condition || r.Catch || r.Interrupted != "" || r.Response == "" || math.IsNaN(r.Level) {
@@ -78,6 +82,10 @@ func fitOne(s *study.Study, b *study.Block, condition string, records []run.Reco
 	}
 	if len(t.Levels) == 0 {
 		t.Explanation = "There are no trials yet."
+		return t
+	}
+	if p.Second != "" {
+		t.Explanation = "Levels are of two parameters, so that no one function fits them: see the procedure's own estimate."
 		return t
 	}
 	fit, err := t.fit(psychometric.Collect(t.Levels, t.Correct), task, p)

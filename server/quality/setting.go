@@ -1,0 +1,33 @@
+package quality
+
+import (
+	"distal/experiments/psychometric"
+	"distal/experiments/run"
+	"distal/experiments/study"
+)
+
+// match takes the point of subjective equality from the settings of a block
+// whose levels are adjusted: their mean on the scale with Student's interval.
+func (t *Threshold) match(b *study.Block, records []run.Record) {
+	t.Function = "mean of the settings"
+	for i := range records {
+		r := records[i].Trial
+		if r == nil || r.Given == nil || r.Block != b.Name || r.Condition != t.Condition || r.Catch || r.Interrupted != "" || r.Response == "" {
+			continue
+		}
+		t.Trials = append(t.Trials, r.Trial)
+		t.Levels, t.Correct = append(t.Levels, r.Given.Setting), append(t.Correct, true)
+	}
+	scale, standard := psychometric.Log10, 1.0 // the standard changes nothing that is used here
+	if t.Linear {
+		scale = psychometric.Linear
+	}
+	m, err := psychometric.MatchFromSettings(t.Levels, scale, standard, 0.95)
+	if err != nil {
+		t.Explanation = err.Error()
+		return
+	}
+	t.Explanation = m.Explanation
+	t.Known = m.PSE.Valid
+	t.Threshold, t.Low, t.High = m.PSE.Value, m.PSE.Interval.Low, m.PSE.Interval.High
+}
