@@ -26,15 +26,18 @@ func TestEfficiency(t *testing.T) {
 		slopes, lapses []float64
 		at60, at120    float64
 	}{
-		{"Known", []float64{3.5}, []float64{0.02}, 0.40, 0.52},
-		{"Default", DefaultSlopes(), DefaultLapses(), 0.38, 0.45},
+		{"Known", []float64{3.5}, []float64{0.02}, 0.45, 0.55},
+		{"Default", DefaultSlopes(), DefaultLapses(), 0.44, 0.51},
 	}
 	const runs = 240
 	for _, tt := range tests {
 		t.Run(tt.name, func(t *testing.T) {
 			t.Parallel()
 			spec := defaultSpec()
-			spec.Slopes, spec.Lapses, spec.MaxTrials = tt.slopes, tt.lapses, 120
+			spec.Slopes, spec.Lapses, spec.MaxTrials, spec.Prior = tt.slopes, tt.lapses, 120, Middle
+			if len(tt.slopes) == 1 {
+				spec.Place = Entropy
+			}
 			var square [2]float64
 			bias, within := 0.0, 0
 			for r := range runs {

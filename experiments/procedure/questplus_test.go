@@ -209,12 +209,16 @@ func answer(s *random.Stream, level, threshold, slope, lapse float64) int {
 
 // One trial with 40 thresholds × 20 slopes × 10 lapse rates and 60 levels.
 func BenchmarkQuestPlus(b *testing.B) {
-	for _, nuisance := range []bool{false, true} {
-		name := "joint"
-		if nuisance {
-			name = "nuisance"
-		}
-		b.Run(name, func(b *testing.B) {
+	for _, rule := range []struct {
+		name   string
+		change func(*Spec)
+	}{
+		{"joint", func(s *Spec) { s.Nuisance = false }},
+		{"nuisance", func(*Spec) {}},
+		{"marginal", func(s *Spec) { s.Method = PsiMarginal }},
+		{"marginalWithSlope", func(s *Spec) { s.Method, s.KeepSlope = PsiMarginal, true }},
+	} {
+		b.Run(rule.name, func(b *testing.B) {
 			spec := defaultSpec()
 			spec.ThresholdCount, spec.Slopes, spec.Lapses = 40, make([]float64, 20), make([]float64, 10)
 			for i := range spec.Slopes {
@@ -223,7 +227,8 @@ func BenchmarkQuestPlus(b *testing.B) {
 			for i := range spec.Lapses {
 				spec.Lapses[i] = float64(i) / 100
 			}
-			spec.Nuisance, spec.MaxTrials = nuisance, math.MaxInt
+			spec.MaxTrials = math.MaxInt
+			rule.change(&spec)
 			q, s := newQuestPlus(spec), random.New(1, 0, random.PurposeObserver)
 			b.ReportAllocs()
 			for b.Loop() {
