@@ -417,7 +417,7 @@ func walkTask(c *codec, t *Task, s *Study) {
 }
 
 func walkProcedure(c *codec, p *ProcedureSpec) {
-	oneOf(c, "method", &p.Method, procedure.MethodNames, procedure.QuestPlus, true, "how levels are chosen")
+	oneOf(c, "method", &p.Method, procedure.MethodNames, procedure.QuestPlus, true, "how levels are chosen; quest_plus, quest, psi and psi_marginal are the Bayesian methods")
 	c.text("parameter", &p.Parameter, word{Required: true}, "the display parameter that is varied")
 	oneOf(c, "scale", &p.Scale, procedure.ScaleNames, procedure.Log10, false, "axis of the levels")
 	c.number("min", &p.Min, num{Min: -inf, Max: inf, Required: true}, "lowest level, in the parameter's unit")
@@ -435,19 +435,19 @@ func walkProcedure(c *codec, p *ProcedureSpec) {
 	c.whole("reversals", &p.Reversals, num{Min: 0, Max: 1000}, "staircase: ends after so many, 0: after max_trials; limits: number of series")
 	c.whole("discard", &p.Discard, num{Min: 0, Max: 1000, Default: 2}, "staircase: reversals left out of the estimate")
 	c.whole("easier_is", &p.EasierIs, num{Min: -1, Max: 1, Default: 1}, "+1: a higher level is easier, −1: a lower one")
-	c.number("threshold_min", &p.ThresholdMin, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: lowest threshold considered, 0: min")
-	c.number("threshold_max", &p.ThresholdMax, num{Min: -inf, Max: inf, Default: 0}, "quest_plus: highest threshold considered, 0: max")
-	c.whole("threshold_count", &p.ThresholdCount, num{Min: 2, Max: 400, Default: 80}, "quest_plus: thresholds considered, evenly on the scale")
-	oneOf(c, "prior", &p.Prior, procedure.PriorNames, usualPrior(p.Method), false, "quest_plus: how likely the thresholds are beforehand: middle is even over the middle half of the range and a twentieth of that outside, raised_cosine ten times as likely in the middle as at the ends; usual for quest is normal, for psi and psi_marginal uniform")
+	c.number("threshold_min", &p.ThresholdMin, num{Min: -inf, Max: inf, Default: 0}, "Bayesian methods: lowest threshold considered, 0: min")
+	c.number("threshold_max", &p.ThresholdMax, num{Min: -inf, Max: inf, Default: 0}, "Bayesian methods: highest threshold considered, 0: max")
+	c.whole("threshold_count", &p.ThresholdCount, num{Min: 2, Max: 400, Default: 80}, "Bayesian methods: thresholds considered, evenly on the scale")
+	oneOf(c, "prior", &p.Prior, procedure.PriorNames, usualPrior(p.Method), false, "Bayesian methods: how likely the thresholds are beforehand: middle is even over the middle half of the range and a twentieth of that outside, raised_cosine ten times as likely in the middle as at the ends; usual for quest is normal, for psi and psi_marginal uniform")
 	c.rare(p.Prior != procedure.Normal, func() {
 		c.number("prior_mean", &p.PriorMean, num{Min: -inf, Max: inf}, "prior normal: the likeliest threshold, 0: the middle of the range")
 		c.number("prior_sd_log10", &p.PriorSDLog10, num{Min: 0.01, Max: 10, Default: 0.5}, "prior normal: standard deviation of log10 threshold")
 	})
-	c.numbers("slopes", &p.Slopes, num{Min: 0.01, Max: 100}, "quest_plus: Weibull slopes considered, equally likely")
-	c.numbers("lapses", &p.Lapses, num{Min: 0, Max: 0.5}, "quest_plus: lapse rates considered, equally likely")
+	c.numbers("slopes", &p.Slopes, num{Min: 0.01, Max: 100}, "Bayesian methods: Weibull slopes considered, equally likely")
+	c.numbers("lapses", &p.Lapses, num{Min: 0, Max: 0.5}, "Bayesian methods: lapse rates considered, equally likely")
 	c.number("guess", &p.Guess, num{Min: 0, Max: 0.9, Default: 0.5}, "proportion correct by guessing")
-	c.whole("level_count", &p.LevelCount, num{Min: 2, Max: 400, Default: 60}, "quest_plus: levels from min to max, evenly on the scale")
-	c.number("stop_sd_log10", &p.StopSDLog10, num{Min: 0, Max: 2}, "quest_plus: ends when the posterior sd of the threshold is below, 0: never")
+	c.whole("level_count", &p.LevelCount, num{Min: 2, Max: 400, Default: 60}, "Bayesian methods: levels from min to max, evenly on the scale")
+	c.number("stop_sd_log10", &p.StopSDLog10, num{Min: 0, Max: 2}, "Bayesian methods: ends when the posterior sd of the threshold is below, 0: never")
 	c.flag("nuisance", &p.Nuisance, true, "quest_plus: slope and lapse are integrated out (Prins 2013)")
 	c.rare(p.Place == procedure.Own, func() {
 		oneOf(c, "place", &p.Place, procedure.PlaceNames, procedure.Own, false, "Bayesian methods: rule by which the level is chosen: least expected entropy or variance, or where a trial tells most if the threshold is the posterior's mode, mean or median; own is the published rule of the method")
@@ -487,6 +487,9 @@ func fillProcedure(p *procedure.Spec) {
 	p.FillModel()
 	if len(p.StepsUp) == 0 {
 		p.StepsUp = []float64{0.2, 0.1}
+		if p.Method == procedure.Limits {
+			p.StepsUp = p.StepsUp[1:]
+		}
 	}
 	if p.Start == 0 {
 		p.Start = p.Max
