@@ -217,6 +217,7 @@ func runColumns() []column[runRow] {
 			return ""
 		}},
 	}
+	columns = append(columns, scaleColumns()...)
 	for i, m := range quality.Metrics {
 		columns = append(columns, column[runRow]{m.Name, m.Unit, m.Doc, "not measured", func(r runRow) string { return number(r.m[i]) }})
 	}
