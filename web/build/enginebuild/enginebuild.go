@@ -13,13 +13,14 @@ import (
 	"os"
 	"os/exec"
 	"path/filepath"
+	"slices"
 	"strings"
 )
 
-const (
-	enginePackage  = "distal/web/engine"
-	displayPackage = "distal/experiments/display"
-)
+const enginePackage = "distal/web/engine"
+
+// documented are the packages whose explanations the engine does without.
+var documented = []string{"distal/experiments/display", "distal/experiments/study"}
 
 // flags make a reactor module without symbol table, inlining only where random
 // numbers and functions are made, since inlined copies cost 90 KB.
@@ -78,30 +79,15 @@ func goTool(ctx context.Context, args ...string) (string, error) {
 	return string(out), nil
 }
 
-// withoutDocs writes copies of the displays' files in which the explanations of
-// kinds and parameters are empty, and the overlay that puts them in place.
-// Browsers never show these texts, and they cost 8 KB of download.
+// withoutDocs writes copies of files in which the explanations of displays, their
+// parameters and the keys of a study are empty, and the overlay that puts them in
+// place. Browsers never show these texts, and they cost 12 KB of download.
 func withoutDocs(ctx context.Context, work string) (string, error) {
-	list, err := goTool(ctx, "list", "-f", "{{.Dir}}{{range .GoFiles}}\n{{.}}{{end}}", displayPackage)
-	if err != nil {
-		return "", err
-	}
-	dir, names, _ := strings.Cut(strings.TrimSpace(list), "\n")
 	replace := map[string]string{}
-	for _, name := range strings.Fields(names) {
-		source, err := os.ReadFile(filepath.Join(dir, name))
-		if err != nil {
+	for _, name := range documented {
+		if err := emptyPackage(ctx, name, work, replace); err != nil {
 			return "", err
 		}
-		stripped, err := emptyDocs(name, source)
-		if err != nil {
-			return "", err
-		}
-		copied := filepath.Join(work, name)
-		if err := os.WriteFile(copied, stripped, 0o600); err != nil {
-			return "", err
-		}
-		replace[filepath.Join(dir, name)] = copied
 	}
 	text, err := json.Marshal(map[string]any{"Replace": replace})
 	if err != nil {
@@ -111,7 +97,63 @@ func withoutDocs(ctx context.Context, work string) (string, error) {
 	return path, os.WriteFile(path, text, 0o600)
 }
 
-// emptyDocs gives source with every field Doc of a composite literal set to "".
+func emptyPackage(ctx context.Context, packageName, work string, replace map[string]string) error {
+	list, err := goTool(ctx, "list", "-f", "{{.Dir}}{{range .GoFiles}}\n{{.}}{{end}}", packageName)
+	if err != nil {
+		return err
+	}
+	dir, names, _ := strings.Cut(strings.TrimSpace(list), "\n")
+	for _, name := range strings.Fields(names) {
+		source, err := os.ReadFile(filepath.Join(dir, name))
+		if err != nil {
+			return err
+		}
+		stripped, err := emptyDocs(name, source)
+		if err != nil {
+			return err
+		}
+		copied := filepath.Join(work, filepath.Base(packageName)+"_"+name)
+		if err := os.WriteFile(copied, stripped, 0o600); err != nil {
+			return err
+		}
+		replace[filepath.Join(dir, name)] = copied
+	}
+	return nil
+}
+
+// explaining are the calls of a study's walk that take an explanation: their last
+// text that is no key.
+var explaining = []string{
+	"number", "whole", "text", "flag", "words", "numbers", "sentence", "settings", "reference", "group", "named", "namedBy", "listed", "oneOf",
+}
+
+// explanation is the expression that explains what n declares, nil if none does.
+func explanation(n ast.Node) ast.Expr {
+	switch n := n.(type) {
+	case *ast.KeyValueExpr:
+		if key, ok := n.Key.(*ast.Ident); ok && key.Name == "Doc" {
+			return n.Value
+		}
+	case *ast.CallExpr:
+		name := ""
+		switch f := n.Fun.(type) {
+		case *ast.Ident:
+			name = f.Name
+		case *ast.SelectorExpr:
+			if on, ok := f.X.(*ast.Ident); ok && on.Name == "c" {
+				name = f.Sel.Name
+			}
+		}
+		for i := len(n.Args) - 1; i > 1 && slices.Contains(explaining, name); i-- {
+			if text, ok := n.Args[i].(*ast.BasicLit); ok && text.Kind == token.STRING {
+				return text
+			}
+		}
+	}
+	return nil
+}
+
+// emptyDocs gives source with every explanation set to "".
 func emptyDocs(name string, source []byte) ([]byte, error) {
 	files := token.NewFileSet()
 	tree, err := parser.ParseFile(files, name, source, parser.SkipObjectResolution)
@@ -120,18 +162,21 @@ func emptyDocs(name string, source []byte) ([]byte, error) {
 	}
 	var out bytes.Buffer
 	done := 0
+	var places [][2]int
 	ast.Inspect(tree, func(n ast.Node) bool {
-		pair, ok := n.(*ast.KeyValueExpr)
-		if !ok {
+		doc := explanation(n)
+		if doc == nil {
 			return true
 		}
-		if key, ok := pair.Key.(*ast.Ident); ok && key.Name == "Doc" {
-			out.Write(source[done:files.Position(pair.Value.Pos()).Offset])
-			out.WriteString(`""`)
-			done = files.Position(pair.Value.End()).Offset
-		}
+		places = append(places, [2]int{files.Position(doc.Pos()).Offset, files.Position(doc.End()).Offset})
 		return true
 	})
+	slices.SortFunc(places, func(a, b [2]int) int { return a[0] - b[0] }) // a call stands before what its other arguments hold
+	for _, place := range places {
+		out.Write(source[done:place[0]])
+		out.WriteString(`""`)
+		done = place[1]
+	}
 	out.Write(source[done:])
 	return out.Bytes(), nil
 }

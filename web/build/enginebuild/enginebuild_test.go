@@ -3,6 +3,7 @@ package enginebuild
 import (
 	"bytes"
 	"os"
+	"strings"
 	"testing"
 
 	"github.com/andybalholm/brotli"
@@ -18,6 +19,12 @@ func TestEmptyDocs(t *testing.T) {
 	}
 	if string(got) != want {
 		t.Errorf("got\n%s\nwant\n%s", got, want)
+	}
+	const walk = "package p\n\nfunc walk(c *codec) {\n\tc.group(\"about\", true, \"what\", func(c *codec) { c.text(\"name\", &n, word{Default: \"kept\"}, \"why\") })\n" +
+		"\tnamed(c, \"choices\", &l, \"how\", func() {})\n\tc.problem(key, v, \"a message\")\n\tc.number(key, &x, rule, doc)\n}\n"
+	wantWalk := strings.NewReplacer(`"what"`, `""`, `"why"`, `""`, `"how"`, `""`).Replace(walk)
+	if got, err := emptyDocs("p.go", []byte(walk)); err != nil || string(got) != wantWalk {
+		t.Errorf("%v, got\n%s\nwant\n%s", err, got, wantWalk)
 	}
 	if _, err := emptyDocs("p.go", []byte("package")); err == nil {
 		t.Error("a broken source was accepted")
@@ -41,8 +48,10 @@ func TestBuild(t *testing.T) {
 	if !bytes.Equal(builds[0], builds[1]) {
 		t.Error("two builds differ")
 	}
-	if bytes.Contains(builds[0], []byte("counter-clockwise from rightwards")) {
-		t.Error("explanations of parameters are in the engine")
+	for _, text := range []string{"counter-clockwise from rightwards", "fixation mark alone before the stimulus", "what participants do in a trial"} {
+		if bytes.Contains(builds[0], []byte(text)) {
+			t.Errorf("the engine holds the explanation %q", text)
+		}
 	}
 	var compressed bytes.Buffer
 	w := brotli.NewWriterLevel(&compressed, brotli.BestCompression)
