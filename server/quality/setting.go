@@ -6,10 +6,13 @@ import (
 	"distal/experiments/study"
 )
 
+// MeanOfSettings is the Function of thresholds that are adjusted.
+const MeanOfSettings = "mean of the settings"
+
 // match takes the point of subjective equality from the settings of a block
 // whose levels are adjusted: their mean on the scale with Student's interval.
 func (t *Threshold) match(b *study.Block, records []run.Record) {
-	t.Function = "mean of the settings"
+	t.Function = MeanOfSettings
 	for i := range records {
 		r := records[i].Trial
 		if r == nil || r.Given == nil || r.Block != b.Name || r.Condition != t.Condition || r.Catch || r.Interrupted != "" || r.Response == "" {

@@ -371,6 +371,9 @@ func psychometricPlot(t quality.Threshold) pages.RunPlot {
 	if t.Counted != "" {
 		p.YLabel, p.Marks, p.Caption = "proportion of “"+t.Counted+"”", "filled “"+t.Counted+"”", "Point of balance"
 	}
+	if t.Function == quality.MeanOfSettings {
+		p.Marks, p.Caption = "each is a setting", "Mean of the settings"
+	}
 	if t.Condition != "" {
 		p.Name = t.Condition
 	}
