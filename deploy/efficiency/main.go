@@ -79,17 +79,17 @@ func (t *tally) add(e procedure.Estimate, truth float64) {
 }
 
 // simulate runs spec on o, whose true value is offset above the Weibull threshold.
-func simulate(spec procedure.Spec, o observer, offset float64, runs int, outer bool) []tally {
+func simulate(spec procedure.Spec, o observer, offset float64, runs int, seed uint64, outer bool) []tally {
 	result := make([]tally, len(marks))
 	for r := range runs {
-		s := random.NewSub(20, uint32(r), random.PurposeObserver, 0)
+		s := random.NewSub(seed, uint32(r), random.PurposeObserver, 0)
 		threshold := -1.5 + (float64(r)+s.Float64())/float64(runs)
 		if outer && threshold < -1 {
 			threshold -= 0.5
 		} else if outer {
 			threshold += 0.5
 		}
-		p := procedure.New(spec, random.NewSub(20, uint32(r), random.PurposeProcedure, 0))
+		p := procedure.New(spec, random.NewSub(seed, uint32(r), random.PurposeProcedure, 0))
 		for m := 0; m < len(marks); {
 			x, _ := p.Next()
 			outcome := 0
@@ -143,6 +143,7 @@ func main() {
 	lapse := flag.Float64("lapse", 0.02, "of the observer")
 	only := flag.String("only", "", "rows whose name contains this text")
 	converge := flag.Bool("converge", false, "print where staircases settle")
+	seed := flag.Uint64("seed", 20, "of the simulation: rows share it, so that they meet the same observers")
 	outer := flag.Bool("outer", false, "thresholds in the outer halves of the range, which the default prior takes for unlikely")
 	flag.Parse()
 	if *converge {
@@ -171,7 +172,7 @@ func main() {
 		if !strings.Contains(row.name, *only) {
 			continue
 		}
-		for i, t := range simulate(row.spec, o, row.offset, *runs, *outer) {
+		for i, t := range simulate(row.spec, o, row.offset, *runs, *seed, *outer) {
 			n := float64(t.n)
 			mse := t.square / n
 			efficiency := o.bound() / float64(marks[i]) / mse
