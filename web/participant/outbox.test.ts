@@ -144,3 +144,14 @@ test("the last answer is kept: it holds the completion code", async () => {
   await box.flush();
   assert.deepEqual(box.last, end);
 });
+
+test("long records that waited go in several uploads, however long one is", async () => {
+  const { server, box } = await setup();
+  server.failures = [new TypeError("no network")];
+  const long = (sequence: number, length: number): Stored => ({ ...record(sequence), detail: "x".repeat(length) });
+  await box.add(record(1));
+  for (const [i, length] of [300_000, 300_000, 700_000, 10, 10].entries()) await box.add(long(i + 2, length));
+  online();
+  assert.equal(await box.flush(), true);
+  assert.deepEqual(server.uploads, [[1, 2], [3], [4], [5, 6]]);
+});

@@ -124,6 +124,10 @@ export interface Answer {
   return_url: string | null;
 }
 
+/** Most records and characters of one upload: the server takes 500 records and 2 MB. */
+const parcelRecords = 100;
+const parcelLength = 500_000;
+
 /** Sends what waits, in order, and keeps trying. */
 export class Outbox {
   private waiting: Stored[] = [];
@@ -166,11 +170,18 @@ export class Outbox {
     return this.refused === null;
   }
 
+  /** The first records that wait: as many as one upload takes, one at least. */
+  private parcel(): Stored[] {
+    let length = 0;
+    const n = this.waiting.findIndex((r, i) => i === parcelRecords || ((length += JSON.stringify(r).length) > parcelLength && i > 0));
+    return n < 0 ? [...this.waiting] : this.waiting.slice(0, n);
+  }
+
   private async send(): Promise<void> {
     while (this.waiting.length > 0) {
       this.onState("sending");
       try {
-        const answer = await this.post(this.waiting.slice(0, 100));
+        const answer = await this.post(this.parcel());
         this.last = answer;
         await this.shelf.drop(this.run, answer.acknowledged);
         this.waiting = this.waiting.filter((r) => r.sequence > answer.acknowledged);
