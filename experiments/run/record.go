@@ -98,7 +98,7 @@ type DisplayCheck struct {
 	CanvasHeightPx  int     // "canvas_height_px"
 	PixelRatio      float64 // "device_pixel_ratio"
 	FloatTarget     bool    // "float_target": blending in a float target
-	Renderer        string  // "renderer": as the browser names it
+	Renderer        string  // "renderer": as the browser names it, then the bits of its render target and whether presentation is of low latency
 	CrossOriginIsol bool    // "cross_origin_isolated"
 }
 

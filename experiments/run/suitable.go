@@ -23,6 +23,7 @@ const (
 	ReasonJitter       = "jitter"
 	ReasonDropped      = "dropped"
 	ReasonFieldSmall   = "field_small"
+	ReasonNoFloat      = "no_float"
 	ReasonNotMeasured  = "not_measured"
 	ReasonPractice     = "practice"
 	ReasonUnsuitable   = "unsuitable"
@@ -116,6 +117,8 @@ func CheckDisplay(s *study.Study, c *DisplayCheck) string {
 		return ReasonDropped
 	case c.WidthDeg < screen.MinWidthDeg || c.HeightDeg < screen.MinHeightDeg:
 		return ReasonFieldSmall
+	case screen.FloatTarget && !c.FloatTarget:
+		return ReasonNoFloat
 	}
 	return ""
 }

@@ -148,6 +148,7 @@ func TestDisplayNotUsable(t *testing.T) {
 		{"dropped frames", func(c *run.DisplayCheck) { c.DroppedPercent = 5.1 }, run.ReasonDropped},
 		{"narrow", func(c *run.DisplayCheck) { c.WidthDeg = 8.9 }, run.ReasonFieldSmall},
 		{"low", func(c *run.DisplayCheck) { c.HeightDeg = 8.9 }, run.ReasonFieldSmall},
+		{"no float target", func(c *run.DisplayCheck) { c.FloatTarget = false }, ""},
 		{"just large enough", func(c *run.DisplayCheck) { c.WidthDeg, c.HeightDeg = 9, 9 }, ""},
 	} {
 		check := goodCheck()
@@ -160,6 +161,20 @@ func TestDisplayNotUsable(t *testing.T) {
 		if err := p.try(run.Record{Kind: run.KindDisplayCheck, Check: check}); (err == nil) != (c.want == "") {
 			t.Errorf("%s: %v", c.name, err)
 		}
+	}
+}
+
+// A study can refuse browsers that blend in 8 bits.
+func TestDisplayWithoutFloatTarget(t *testing.T) {
+	t.Parallel()
+	s := changed(t, "  min_width_deg: 9\n", "  min_width_deg: 9\n  float_target: true\n")
+	check := goodCheck()
+	if got := run.CheckDisplay(s, check); got != "" {
+		t.Errorf("with a float target: %q", got)
+	}
+	check.FloatTarget = false
+	if got := run.CheckDisplay(s, check); got != run.ReasonNoFloat {
+		t.Errorf("without a float target: %q, want %q", got, run.ReasonNoFloat)
 	}
 }
 
@@ -241,6 +256,17 @@ func TestCalibrate(t *testing.T) {
 		if got, want := number(field, key), 2*math.Atan(mm/2/570)*180/math.Pi; math.Abs(got-want) > 1e-9 {
 			t.Errorf("field: %s %g, want %g", key, got, want)
 		}
+	}
+	// A wandering eye in one setting: the median stays; its standard error is √(π/2) sd ÷ √n with sd = 9.53502316 (R: sd(c(158,160,159,140))
+	// for four settings), beside the spread from eye to eye, 2 · 1.1° ÷ sin 31°.
+	distance = ask(`{"of":"distance","offsets_mm":[160,140,158,159]}`)
+	d := 158.5 / math.Tan(15.5*math.Pi/180)
+	if got := number(distance, "distance_mm"); !accepted(distance) || math.Abs(got-d) > 1e-9 {
+		t.Errorf("distance with a wandering eye: %g, want %g", got, d)
+	}
+	sd := math.Hypot(d*2*1.1*math.Pi/180/math.Sin(31*math.Pi/180), d*math.Sqrt(math.Pi/2)*9.53502316/2/158.5)
+	if got := number(distance, "sd_mm"); math.Abs(got-sd) > 1e-5 {
+		t.Errorf("distance with a wandering eye: sd %g, want %g", got, sd)
 	}
 	intervals := ""
 	for i := range 60 {

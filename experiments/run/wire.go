@@ -116,16 +116,23 @@ func calibrateDistance(s *study.Study, f *fields, o *object) {
 	if s.Screen.Distance == study.StatedDistance {
 		d.DistanceMm, d.SDMm = s.Screen.StatedDistanceMm, float64(statedSpread*s.Screen.StatedDistanceMm)
 	} else {
-		mean, sd := visual.MeanSD(d.OffsetsMm)
+		// One setting with a wandering eye does not move the median.
+		offset := visual.Median(append([]float64(nil), d.OffsetsMm...))
+		_, sd := visual.MeanSD(d.OffsetsMm)
 		var eye float64
-		d.DistanceMm, eye = visual.BlindSpotDistance(mean)
+		d.DistanceMm, eye = visual.BlindSpotDistance(offset)
 		// Eye-to-eye spread and the settings' own standard error add as variances.
-		own := d.DistanceMm * sd / mean / math.Sqrt(float64(max(len(d.OffsetsMm), 1)))
+		own := d.DistanceMm * sd / offset * medianError / math.Sqrt(float64(max(len(d.OffsetsMm), 1)))
 		d.SDMm = math.Sqrt(float64(eye*eye) + float64(own*own))
 	}
 	o.number("distance_mm", d.DistanceMm).number("sd_mm", d.SDMm)
 	accept(o, CheckDistance(s, d))
 }
+
+// medianError is the standard error of a median in standard errors of the
+// mean, for a large normal sample, √(π/2) (Kenney JF, Keeping ES 1962,
+// Mathematics of Statistics, part 1, 3rd ed., p. 211: from memory); above that of few settings, so on the careful side.
+const medianError = 1.2533141373155003
 
 // statedSpread is how well people keep a stated distance, as a share of it
 // (common practice, no source).

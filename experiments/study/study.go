@@ -100,6 +100,7 @@ type Screen struct {
 	MaxDistanceSpread  float64 // largest accepted sd/mean of the distance settings
 	BackgroundFraction float64 // mean luminance as a fraction of white, 0.5 by default
 	Fullscreen         bool
+	FloatTarget        bool // refuse screens whose browser blends in 8 bits only
 }
 
 // DistanceMethod is how the viewing distance is found.

@@ -167,6 +167,7 @@ func walkScreen(c *codec, s *Screen) {
 	c.number("max_distance_spread", &s.MaxDistanceSpread, num{Min: 0.01, Max: 1, Default: 0.25}, "largest accepted standard deviation ÷ mean of the distance settings")
 	c.number("background_fraction", &s.BackgroundFraction, num{Min: 0.05, Max: 0.95, Default: 0.5}, "mean luminance as a fraction of white")
 	c.flag("fullscreen", &s.Fullscreen, true, "ask for full screen")
+	c.flag("float_target", &s.FloatTarget, false, "refuse browsers that blend light in steps of 8 bits only")
 }
 
 func walkDisplayPlace(c *codec, d *DisplaySpec) {
