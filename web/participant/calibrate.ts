@@ -296,5 +296,5 @@ function explain(reason: string, c: { refresh_ms: number; jitter_ms: number; dro
     case "dropped": return say("reason_dropped", { measured: c.dropped_percent.toFixed(0), needed: s.max_dropped_percent });
     case "field_small": return say("reason_field_small", { measured: `${c.width_deg.toFixed(0)} × ${c.height_deg.toFixed(0)}`, needed: `${s.min_width_deg} × ${s.min_height_deg}` });
   }
-  return say("reason_not_measured");
+  return say(reason === "no_float" ? "reason_no_float" : "reason_not_measured");
 }

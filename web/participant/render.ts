@@ -183,6 +183,7 @@ function patchReach(window: number, width: number, height: number): number {
 
 export class Renderer {
   readonly floatTarget: boolean;
+  private readonly format: number; // of the target
   readonly name: string;
   private readonly gl: WebGL2RenderingContext;
   private readonly dotProgram: WebGLProgram;
@@ -217,9 +218,14 @@ export class Renderer {
     this.gl = gl;
     this.dead = gl.isContextLost();
     canvas.addEventListener("webglcontextlost", () => (this.dead = true), { once: true });
-    this.floatTarget = gl.getExtension("EXT_color_buffer_float") !== null && gl.getExtension("EXT_float_blend") !== null;
+    // Blending in 32-bit floats needs a second extension. 16 bits still hold negative light and steps below an 8-bit grey level; 8 bits hold neither.
+    const float = gl.getExtension("EXT_color_buffer_float") !== null;
+    const wide = float && gl.getExtension("EXT_float_blend") !== null;
+    this.floatTarget = float || gl.getExtension("EXT_color_buffer_half_float") !== null;
+    this.format = wide ? gl.R32F : float ? gl.R16F : this.floatTarget ? gl.RGBA16F : gl.RGBA8;
     const info = gl.getExtension("WEBGL_debug_renderer_info");
-    this.name = String(gl.getParameter(info ? info.UNMASKED_RENDERER_WEBGL : gl.RENDERER)).slice(0, 200);
+    this.name = `${String(gl.getParameter(info ? info.UNMASKED_RENDERER_WEBGL : gl.RENDERER)).slice(0, 160)}; ${wide ? 32 : this.floatTarget ? 16 : 8}-bit target`
+      + (gl.getContextAttributes()?.desynchronized ? "; low latency" : "");
     this.dotProgram = this.program(dotVertex, dotFragment);
     this.patchProgram = this.program(patchVertex, patchFragment);
     this.finalProgram = this.program(finalVertex, finalFragment);
@@ -267,7 +273,7 @@ export class Renderer {
     gl.deleteTexture(this.texture);
     this.texture = gl.createTexture();
     gl.bindTexture(gl.TEXTURE_2D, this.texture);
-    gl.texStorage2D(gl.TEXTURE_2D, 1, this.floatTarget ? gl.R32F : gl.RGBA8, width, height);
+    gl.texStorage2D(gl.TEXTURE_2D, 1, this.format, width, height);
     gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MIN_FILTER, gl.NEAREST);
     gl.texParameteri(gl.TEXTURE_2D, gl.TEXTURE_MAG_FILTER, gl.NEAREST);
     gl.bindFramebuffer(gl.FRAMEBUFFER, this.target);
