@@ -191,6 +191,16 @@ func (b *Bench) Screen(s Setup) (Canvas, error) {
 	return c, b.call(&c, "open", geometry, s.Dither)
 }
 
+// Withhold takes WebGL extensions away from every canvas made from now on.
+func (b *Bench) Withhold(names ...string) error {
+	args := make([]any, len(names))
+	for i, n := range names {
+		args[i] = n
+	}
+	var done bool
+	return b.call(&done, "withhold", args...)
+}
+
 // picture is a display list as the page takes it.
 func picture(l *display.List) map[string]any {
 	dots, patches, batches := []float32{}, []float32{}, []int32{}

@@ -4,6 +4,7 @@ import (
 	"context"
 	"fmt"
 	"math"
+	"strings"
 	"testing"
 
 	"distal/experiments/display"
@@ -137,6 +138,45 @@ func TestBrowserAgreesWithRaster(t *testing.T) {
 	wide := fidelity.Setup{WidthCSSPx: 400, HeightCSSPx: 300, PixelRatio: 1, PxPerTan: 1000, BackgroundFraction: 0.5}
 	for _, c := range fidelity.DisplayCases() {
 		check(c.Name, wide, c.List)
+	}
+}
+
+// Where 32-bit targets cannot blend, 16 bits draw the same picture, and where
+// there are only 8 bits, which lose what is darker than nothing, it is said.
+func TestSmallerTargets(t *testing.T) {
+	b := open(t)
+	s := fidelity.Setup{WidthCSSPx: 200, HeightCSSPx: 160, PixelRatio: 1, PxPerTan: 1000, BackgroundFraction: 0.4}
+	for _, c := range []struct {
+		withheld, target string
+		float            bool
+	}{
+		{"none", "; 32-bit target", true},
+		{"EXT_float_blend", "; 16-bit target", true},
+		{"EXT_color_buffer_float", "; 16-bit target", true},
+		{"EXT_color_buffer_half_float", "; 8-bit target", false},
+	} {
+		if err := b.Withhold(c.withheld); err != nil {
+			t.Fatal(err)
+		}
+		canvas, err := b.Screen(s)
+		if err != nil {
+			t.Fatal(err)
+		}
+		if canvas.FloatTarget != c.float || !strings.Contains(canvas.Renderer, c.target) {
+			t.Errorf("without %s: %+v", c.withheld, canvas)
+		}
+		worst := 1.0
+		for _, p := range fidelity.PatchCases()[20:22] { // a sine that is added
+			a, err := b.Compare(p.Name, s, p.List)
+			if err != nil {
+				t.Fatal(err)
+			}
+			worst = min(worst, a.Share())
+		}
+		if same := worst >= 0.995; same != c.float {
+			t.Errorf("without %s: %.3f %% of the pixels agree with the reference", c.withheld, 100*worst)
+		}
+		t.Logf("without %s: %.3f %% of the pixels agree", c.withheld, 100*worst)
 	}
 }
 

@@ -91,9 +91,20 @@ async function loseContext(): Promise<boolean> {
   return seen;
 }
 
+/** From now on new contexts are without these extensions, as on lesser graphics. */
+function withhold(...names: string[]): boolean {
+  const kind = WebGL2RenderingContext.prototype;
+  const given = kind.getExtension as (name: string) => unknown;
+  kind.getExtension = function (this: WebGL2RenderingContext, name: string) {
+    return names.includes(name) ? null : given.call(this, name);
+  } as typeof kind.getExtension;
+  return true;
+}
+
 const bench = {
 
   open,
+  withhold,
   loseContext,
   runMarked,
   frameCost,
