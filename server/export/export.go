@@ -493,7 +493,7 @@ func writeDictionary(w io.Writer) error {
 		rows = append(rows, []string{fileRuns, c.name, c.unit, c.doc, c.missing})
 	}
 	rows = append(rows,
-		[]string{fileRuns, "threshold_*", "the varied parameter's", "threshold by maximum likelihood, lapse rate free from 0 to 0.1: Weibull, 1 − 1/e of the way from guessing to the top, for levels on a log scale; cumulative Gaussian, half the way, on a linear one; where neither of two answers is right, the level at which both are equally likely; columns for each block and condition", "none can be given: see the note"},
+		[]string{fileRuns, "threshold_*", "the varied parameter's", "threshold with 95 % interval: for levels on a log scale Weibull, 1 − 1/e of the way from guessing to the top, mean and central credible interval of a posterior (slopes log-normal, median 3.5, sd 0.5 of the natural logarithm; lapse rates Beta(2, 98) up to 0.1); on a linear scale cumulative Gaussian, half the way, by maximum likelihood with profile interval; where neither of two answers is right, the level at which both are equally likely; columns for each block and condition", "none can be given: see the note"},
 		[]string{fileRuns, "threshold_*_low, threshold_*_high", "the varied parameter's", "95 % interval by profile likelihood", "the data set no limit on this side"},
 		[]string{fileRuns, "threshold_*_note", "", "what may be said about the fit, in words", ""},
 		[]string{fileRuns, "answer_*", "", "answer to the question of this name", "left out or not reached"})

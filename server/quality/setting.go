@@ -1,6 +1,8 @@
 package quality
 
 import (
+	"math"
+
 	"distal/experiments/psychometric"
 	"distal/experiments/run"
 	"distal/experiments/study"
@@ -33,4 +35,8 @@ func (t *Threshold) match(b *study.Block, records []run.Record) {
 	t.Explanation = m.Explanation
 	t.Known = m.PSE.Valid
 	t.Threshold, t.Low, t.High = m.PSE.Value, m.PSE.Interval.Low, m.PSE.Interval.High
+	t.OnScale, t.SE = m.PSE.Value, m.PSE.SE
+	if scale == psychometric.Log10 && m.PSE.Value > 0 {
+		t.OnScale, t.SE = math.Log10(m.PSE.Value), m.PSE.SE/(math.Ln10*m.PSE.Value)
+	}
 }

@@ -9,14 +9,15 @@ import (
 	"distal/experiments/study"
 )
 
-// Threshold is a run's threshold in one block and condition, fitted by maximum
-// likelihood with a lapse rate free within 0 and 0.1.
+// Threshold is a run's threshold in one block and condition.
 //
 // Where answers are right or wrong it is where performance is the Function's way
 // from guessing to the top: 1 − 1/e for Weibull (levels on a log scale), half for
 // the cumulative Gaussian (levels on a linear one). Where a task has two answers
 // and neither is right it is the point of balance: the level at which both are
-// equally likely.
+// equally likely. The Weibull threshold is the mean of a posterior with the prior of
+// this package and its 95 % interval the central credible one; others are maximum-likelihood
+// estimates with profile-likelihood intervals, lapse rate free within 0 and 0.1.
 type Threshold struct {
 	Block       string
 	Condition   string
@@ -27,7 +28,8 @@ type Threshold struct {
 	Counted     string // at a point of balance: the answer whose share is fitted; "" where right answers are
 	Known       bool   // false: Explanation says why there is none
 	Threshold   float64
-	Low, High   float64 // 95 % interval by profile likelihood; infinite or 0 where the data leave it open
+	Low, High   float64 // 95 % interval; infinite or 0 where the data leave it open
+	OnScale, SE float64 // threshold and standard error in log10 units, on a linear scale in the level's
 	Explanation string
 	Fit         *psychometric.Result // nil if nothing could be fitted
 	Levels      []float64            // in the order of the trials
@@ -88,7 +90,8 @@ func fitOne(s *study.Study, b *study.Block, condition string, records []run.Reco
 		t.Explanation = "Levels are of two parameters, so that no one function fits them: see the procedure's own estimate."
 		return t
 	}
-	fit, err := t.fit(psychometric.Collect(t.Levels, t.Correct), task, p)
+	data := psychometric.Collect(t.Levels, t.Correct)
+	fit, err := t.fit(data, task, p)
 	if err != nil {
 		t.Explanation = err.Error()
 		return t
@@ -97,6 +100,10 @@ func fitOne(s *study.Study, b *study.Block, condition string, records []run.Reco
 	t.Explanation = fit.Explanation
 	t.Known = fit.Threshold.Valid
 	t.Threshold, t.Low, t.High = fit.Threshold.Value, fit.Threshold.Interval.Low, fit.Threshold.Interval.High
+	t.OnScale, t.SE = fit.OnScale.Value, fit.OnScale.SE
+	if t.Known && t.Function == "Weibull" {
+		t.settle(data)
+	}
 	return t
 }
 

@@ -236,7 +236,7 @@ func (s *Service) fillRuns(c echo.Context, w who, st store.Study, spec *study.St
 			}
 			if t.Known && r.Outcome == store.OutcomeCompleted {
 				g.Add(pages.ThresholdItem{
-					Run: row.ID, Value: t.Threshold, Low: t.Low, High: t.High, OnScale: t.Fit.OnScale.Value, SE: t.Fit.OnScale.SE, Excluded: r.Excluded, Simulated: r.Simulated,
+					Run: row.ID, Value: t.Threshold, Low: t.Low, High: t.High, OnScale: t.OnScale, SE: t.SE, Excluded: r.Excluded, Simulated: r.Simulated,
 				})
 			}
 		}
