@@ -32,6 +32,7 @@ type cli struct {
 	Demo     demoCommand     `cmd:"" help:"Run a demonstration lab with invented people and simulated runs."`
 	Check    checkCommand    `cmd:"" help:"Check a study file and print its problems."`
 	Rehearse rehearseCommand `cmd:"" help:"Take simulated observers through a study."`
+	Plan     planCommand     `cmd:"" help:"Say how many trials and participants a question needs."`
 	Fit      fitting.Command `cmd:"" help:"Fit psychometric functions to a table of trials or counts."`
 	Bundle   bundleCommand   `cmd:"" help:"Work with signed bundles."`
 	Export   exportCommand   `cmd:"" help:"Write a study's data set."`

@@ -1,20 +1,19 @@
 package main
 
 import (
+	"context"
 	"encoding/json"
 	"fmt"
-	"math"
 	"os"
 	"path/filepath"
 	"time"
 
 	"distal/experiments/library"
-	"distal/experiments/rehearsal"
-	"distal/experiments/run"
 	"distal/experiments/study"
 	"distal/experiments/studyfile"
 	"distal/experiments/value"
 	"distal/server/bundle"
+	"distal/server/planning"
 	"distal/server/quality"
 )
 
@@ -139,121 +138,63 @@ func (c *bundleVerifyCommand) Run() error {
 }
 
 type rehearseCommand struct {
-	File      string  `arg:"" help:"Study file, or the name of a study of the library (${library})."`
-	Observers int     `default:"50" help:"How many simulated observers."`
-	Threshold float64 `default:"0.2" help:"Their threshold, in the level's unit: (1 − 1/e) of the way from guessing to the top."`
-	Slope     float64 `default:"2" help:"Slope of their Weibull function."`
-	Lapse     float64 `default:"0.02" help:"Their lapse rate."`
-	Drift     float64 `help:"Growth of log10 threshold in 100 trials."`
-	FastGuess float64 `help:"Share of answers given at random before 150 ms."`
-	SideBias  float64 `help:"Share of guesses moved to the first choice."`
-	Seed      uint64  `default:"1" help:"Seed of the first observer."`
-	JSON      bool    `help:"Print JSON."`
+	File        string  `arg:"" help:"Study file, or the name of a study of the library (${library})."`
+	Observers   int     `default:"50" help:"How many simulated observers."`
+	Threshold   float64 `default:"0.2" help:"Their threshold, in the level's unit: (1 − 1/e) of the way from guessing to the top."`
+	ThresholdSD float64 `name:"threshold-sd" help:"Standard deviation of log10 threshold between observers."`
+	Slope       float64 `default:"2" help:"Slope of their Weibull function."`
+	Lapse       float64 `default:"0.02" help:"Their lapse rate."`
+	Drift       float64 `help:"Growth of log10 threshold in 100 trials."`
+	Tire        float64 `help:"Growth of the lapse rate in 100 trials."`
+	FastGuess   float64 `help:"Share of answers given at random before 150 ms."`
+	SideBias    float64 `help:"Share of guesses moved to the first choice."`
+	Seed        uint64  `default:"1" help:"Seed of the first observer."`
+	JSON        bool    `help:"Print JSON."`
 }
 
 // Help gives an example.
 func (*rehearseCommand) Help() string {
-	return "Example: distal rehearse motion-coherence --observers 200 --threshold 0.15\n\nThe observers answer the real run engine: same state machine, procedures, catch trials and exclusion rules."
+	return "Example: distal rehearse motion-coherence --observers 200 --threshold 0.15\n\nThe observers answer the real run engine: same state machine, procedures, catch trials and exclusion rules. The spread is printed beside the least that any unbiased estimate could have with as many trials, slope and lapse rate being known; efficiency is the ratio of the variances."
 }
 
-// rehearsed is what rehearse reports.
-type rehearsed struct {
-	Study          string  `json:"study"`
-	Observers      int     `json:"observers"`
-	Threshold      float64 `json:"threshold"`
-	Estimates      int     `json:"estimates"`
-	MeanEstimate   float64 `json:"geometric_mean_estimate"`
-	BiasLog10      float64 `json:"bias_log10"`
-	SDLog10        float64 `json:"sd_log10"`
-	IntervalCovers float64 `json:"interval_95_covers"`
-	MeanTrials     float64 `json:"mean_trials"`
-	MeanMinutes    float64 `json:"mean_minutes"`
-	Excluded       float64 `json:"share_excluded"`
-	Refused        float64 `json:"share_refused"`
-}
-
-func (c *rehearseCommand) Run() error {
+func (c *rehearseCommand) Run(ctx context.Context) error {
 	s, problems := readStudy(c.File)
 	if problems.Failed() {
 		printProblems(c.File, problems)
 		return errRefused
 	}
-	if c.Observers < 1 || c.Threshold <= 0 || c.Slope <= 0 || c.Lapse < 0 || c.Lapse >= 0.5 {
-		return fmt.Errorf("observers must be 1 or more, threshold and slope above 0, lapse from 0 to 0.5")
-	}
-	report, err := c.rehearse(s)
+	r, err := planning.Rehearse(ctx, s, planning.Observers{
+		Count: c.Observers, Threshold: c.Threshold, ThresholdSD: c.ThresholdSD, Slope: c.Slope, Lapse: c.Lapse,
+		Drift: c.Drift, Tire: c.Tire, FastGuess: c.FastGuess, SideBias: c.SideBias, Seed: c.Seed,
+	}, func(done int) {
+		if done%10 == 0 || done == c.Observers {
+			fmt.Fprintf(os.Stderr, "\rrehearsing %d of %d", done, c.Observers)
+		}
+	})
+	fmt.Fprint(os.Stderr, "\r                              \r")
 	if err != nil {
 		return err
 	}
 	if c.JSON {
-		return json.NewEncoder(os.Stdout).Encode(report)
+		return json.NewEncoder(os.Stdout).Encode(r)
 	}
-	fmt.Printf("%s, %d observers with threshold %.4g, slope %.3g, lapse %.3g\n\n", report.Study, report.Observers, c.Threshold, c.Slope, c.Lapse)
-	fmt.Printf("estimate (geometric mean)  %.4g\nbias                       %+.4f log10\nspread                     %.4f log10\n", report.MeanEstimate, report.BiasLog10, report.SDLog10)
-	fmt.Printf("95 %% intervals that hold   %.1f %% of %d\n", 100*report.IntervalCovers, report.Estimates)
+	fmt.Printf("%s, %d observers with threshold %.4g, slope %.3g, lapse %.3g\n\n", r.Study, r.Count, c.Threshold, c.Slope, c.Lapse)
+	fmt.Printf("estimate (geometric mean)  %.4g\nbias                       %+.4f log10\nspread                     %.4f log10\n", r.MeanEstimate, r.BiasLog10, r.SDLog10)
+	fmt.Printf("least possible spread      %.4f log10\nefficiency                 %.2f\n", r.BoundSDLog10, r.Efficiency)
+	fmt.Printf("95 %% intervals that hold   %.1f ± %.1f %% of %d\nno estimate                %d\n", 100*r.IntervalCovers, 100*r.CoversSE, r.Estimates, r.Missing)
 	fmt.Printf("measurement trials         %.1f\nminutes                    %.1f\nexcluded by rules          %.1f %%\nrefused                    %.1f %%\n",
-		report.MeanTrials, report.MeanMinutes, 100*report.Excluded, 100*report.Refused)
+		r.MeanTrials, r.MeanMinutes, 100*r.Excluded, 100*r.Refused)
 	return nil
 }
 
-func (c *rehearseCommand) rehearse(s *study.Study) (rehearsed, error) {
-	report := rehearsed{Study: s.About.Name, Observers: c.Observers, Threshold: c.Threshold}
-	rules, err := quality.Compile(s.Exclusions)
-	if err != nil {
-		return report, err
-	}
-	observer := rehearsal.Observer{Threshold: c.Threshold, Slope: c.Slope, Lapse: c.Lapse, Drift: c.Drift, FastGuess: c.FastGuess, SideBias: c.SideBias}
-	screen := rehearsal.DefaultScreen()
-	screen.SkipDisplays = true
-	var logs []float64
-	covered := 0
-	for i := range c.Observers {
-		records, err := rehearsal.Observe(s, run.Assignment{Seed: c.Seed + uint64(i), Order: i}, observer, screen, "rehearsal", 0)
-		if err != nil {
-			return report, err
-		}
-		m := quality.Measure(records)
-		report.MeanTrials += m.Value("trials") / float64(c.Observers)
-		report.MeanMinutes += m.Value("minutes") / float64(c.Observers)
-		if records[len(records)-1].Kind == run.KindRefusal {
-			report.Refused += 1 / float64(c.Observers)
-			continue
-		}
-		breaches, err := rules.Apply(m)
-		if err != nil {
-			return report, err
-		}
-		if len(breaches) > 0 {
-			report.Excluded += 1 / float64(c.Observers)
-		}
-		for _, t := range quality.Thresholds(s, records) {
-			if !t.Known {
-				continue
-			}
-			logs = append(logs, math.Log10(t.Threshold))
-			if t.Low <= c.Threshold && c.Threshold <= t.High {
-				covered++
-			}
-		}
-	}
-	report.summarise(logs, covered)
-	return report, nil
-}
+// planCommand reads the study and plans it.
+type planCommand struct{ planning.Command }
 
-func (r *rehearsed) summarise(logs []float64, covered int) {
-	r.Estimates = len(logs)
-	if len(logs) == 0 {
-		return
+func (c *planCommand) Run(ctx context.Context) error {
+	s, problems := readStudy(c.File)
+	if problems.Failed() {
+		printProblems(c.File, problems)
+		return errRefused
 	}
-	mean := 0.0
-	for _, x := range logs {
-		mean += x / float64(len(logs))
-	}
-	for _, x := range logs {
-		r.SDLog10 += (x - mean) * (x - mean)
-	}
-	r.SDLog10 = math.Sqrt(r.SDLog10 / math.Max(1, float64(len(logs)-1)))
-	r.MeanEstimate = math.Pow(10, mean)
-	r.BiasLog10 = mean - math.Log10(r.Threshold)
-	r.IntervalCovers = float64(covered) / float64(len(logs))
+	return c.Do(ctx, s, os.Stdout, os.Stderr)
 }

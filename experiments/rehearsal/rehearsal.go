@@ -27,6 +27,7 @@ type Observer struct {
 	SideBias  float64 // share of the guesses moved to the first choice, 0 to 1
 	FastGuess float64 // share of trials answered at random before 150 ms
 	Drift     float64 // growth of log10 threshold over 100 trials
+	Tire      float64 // growth of the lapse rate over 100 trials; it ends at guessing alone
 	// LowerIsEasier: the level is a difficulty; the function falls with it.
 	LowerIsEasier bool
 	// Scale of the threshold by condition name, e.g. inverted: 2.
@@ -281,7 +282,8 @@ func (w *walk) decide(p *run.TrialPlan, choices int) (choice int, rtMs float64) 
 	// The function is that of one who sees the answer in a share of the trials
 	// and guesses in the others: P = seen + (1 − seen) g.
 	guess := 1 / float64(choices)
-	seen := f * max(0, 1-o.Lapse/(1-guess))
+	lapse := o.Lapse + float64(o.Tire*float64(w.trials)/100)
+	seen := f * max(0, 1-lapse/(1-guess))
 	if right >= 0 && w.answer.Float64() < seen {
 		return right, rtMs
 	}

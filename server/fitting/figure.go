@@ -11,7 +11,6 @@ import (
 	"distal/experiments/psychometric"
 
 	"gonum.org/v1/plot"
-	"gonum.org/v1/plot/font"
 	"gonum.org/v1/plot/plotter"
 	"gonum.org/v1/plot/text"
 	"gonum.org/v1/plot/vg"
@@ -87,19 +86,7 @@ func (r *Report) WriteFigure(w io.Writer, format, label string) error {
 		}
 		panels[i/columns][i%columns] = p
 	}
-	tiles := draw.Tiles{Rows: rows, Cols: columns, PadX: vg.Millimeter, PadY: vg.Millimeter, PadTop: vg.Millimeter, PadBottom: vg.Millimeter, PadLeft: vg.Millimeter, PadRight: 2 * vg.Millimeter}
-	cells := plot.Align(panels, tiles, draw.New(c))
-	for i, row := range panels {
-		for j, p := range row {
-			if p != nil {
-				p.Draw(cells[i][j])
-			}
-		}
-	}
-	if _, err := c.WriteTo(w); err != nil {
-		return fmt.Errorf("write figure: %w", err)
-	}
-	return nil
+	return writeTiles(w, c, panels)
 }
 
 func canvas(format string, wide, high vg.Length) (vg.CanvasWriterTo, error) {
@@ -180,8 +167,7 @@ func (x extent) level(at float64) float64 {
 
 func (r *Report) panel(f *Fit, x extent, label string) *plot.Plot {
 	p := plot.New()
-	style := text.Style{Color: ink, Font: font.From(plot.DefaultFont, textSize), Handler: plot.DefaultTextHandler, XAlign: draw.XCenter, YAlign: draw.YCenter}
-	style.Font.Typeface, style.Font.Variant = "Liberation", "Sans"
+	style := lettering()
 	r.axes(p, x, label, style)
 	if f.Group != "" {
 		p.Title.Text = f.Group
@@ -202,18 +188,7 @@ func (r *Report) axes(p *plot.Plot, x extent, label string, style text.Style) {
 		p.Y.Label.Text = "proportion of responses"
 	}
 	p.X.Tick.Marker, p.Y.Tick.Marker = ticks{x}, plot.ConstantTicks(proportionTicks(p.Y.Min))
-	for _, a := range []*plot.Axis{&p.X, &p.Y} {
-		a.LineStyle = draw.LineStyle{Color: quiet, Width: hairline}
-		a.Tick.LineStyle = a.LineStyle
-		a.Tick.Length = vg.Points(3)
-		a.Padding = vg.Points(2)
-		angle, across := a.Label.TextStyle.Rotation, a.Label.TextStyle
-		a.Label.TextStyle = style
-		a.Label.TextStyle.Rotation, a.Label.TextStyle.XAlign, a.Label.TextStyle.YAlign = angle, across.XAlign, across.YAlign
-		labels := a.Tick.Label
-		a.Tick.Label = style
-		a.Tick.Label.XAlign, a.Tick.Label.YAlign = labels.XAlign, labels.YAlign
-	}
+	styleAxes(p, style)
 }
 
 // lowest is the bottom of the vertical axis: the guess rate or the least proportion seen.
