@@ -31,6 +31,7 @@ type cli struct {
 	Serve    serveCommand    `cmd:"" help:"Serve participants and the workspace. Without --database a private Postgres is started."`
 	Demo     demoCommand     `cmd:"" help:"Run a demonstration lab with invented people and simulated runs."`
 	Check    checkCommand    `cmd:"" help:"Check a study file and print its problems."`
+	Inspect  inspectCommand  `cmd:"" help:"Compute from a study's frames what participants will see: motion signal, sampling, flashes."`
 	Rehearse rehearseCommand `cmd:"" help:"Take simulated observers through a study."`
 	Plan     planCommand     `cmd:"" help:"Say how many trials and participants a question needs."`
 	Fit      fitting.Command `cmd:"" help:"Fit psychometric functions to a table of trials or counts."`

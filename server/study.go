@@ -13,6 +13,7 @@ import (
 	"distal/experiments/studyfile"
 	"distal/experiments/value"
 	"distal/server/bundle"
+	"distal/server/inspecting"
 	"distal/server/planning"
 	"distal/server/quality"
 )
@@ -197,4 +198,20 @@ func (c *planCommand) Run(ctx context.Context) error {
 		return errRefused
 	}
 	return c.Do(ctx, s, os.Stdout, os.Stderr)
+}
+
+// inspectCommand reads the study and inspects it.
+type inspectCommand struct{ inspecting.Command }
+
+func (c *inspectCommand) Run(ctx context.Context) error {
+	s, problems := readStudy(c.File)
+	if problems.Failed() {
+		printProblems(c.File, problems)
+		return errRefused
+	}
+	held, err := c.Do(ctx, s, os.Stdout, os.Stderr)
+	if err == nil && held {
+		return errRefused
+	}
+	return err
 }

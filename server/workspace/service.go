@@ -21,6 +21,7 @@ import (
 	"distal/experiments/study"
 	"distal/server/access"
 	"distal/server/bundle"
+	"distal/server/inspecting"
 	"distal/server/quality"
 	"distal/server/site"
 	"distal/server/store"
@@ -251,6 +252,16 @@ func parameter(c echo.Context) (uuid.UUID, error) {
 func (s *Service) Launch(ctx context.Context, lab, person uuid.UUID, st *study.Study) (uuid.UUID, error) {
 	if problems := quality.Check(st); problems.Failed() {
 		return uuid.Nil, problems
+	}
+	if st.About.FlashApproval == "" {
+		hazard, err := inspecting.Hazards(ctx, st)
+		if err != nil {
+			return uuid.Nil, err
+		}
+		if hazard != "" {
+			return uuid.Nil, site.NewProblem(http.StatusUnprocessableEntity, "flashes",
+				"the study is held back: "+hazard+". It can be launched with a justification by a named person of the lab in about.flash_approval; `distal inspect` shows the frames")
+		}
 	}
 	digests := map[string]string{}
 	var assets []web.Asset
