@@ -3,7 +3,7 @@
 
 import { browserClock, measureIntervals } from "./clock.js";
 import type { Engine } from "./engine.js";
-import { known, say } from "./messages.js";
+import { figure, known, say } from "./messages.js";
 import { button, h, meantForControl, notice, show } from "./page.js";
 import type { StudyText } from "./protocol.js";
 
@@ -288,11 +288,11 @@ export async function checkPage(engine: Engine, study: StudyText, calibration: {
 
 function explain(reason: string, c: { refresh_ms: number; jitter_ms: number; dropped_percent: number; width_deg: number; height_deg: number }, study: StudyText): string {
   const s = study.screen;
-  const hz = (1000 / c.refresh_ms).toFixed(1);
+  const hz = figure(1000 / c.refresh_ms, 1);
   switch (reason) {
     case "refresh_low": return say("reason_refresh_low", { measured: hz, needed: s.min_refresh_hz });
     case "refresh_high": return say("reason_refresh_high", { measured: hz, needed: s.max_refresh_hz });
-    case "jitter": return say("reason_jitter", { measured: c.jitter_ms.toFixed(1), needed: s.max_jitter_ms });
+    case "jitter": return say("reason_jitter", { measured: figure(c.jitter_ms, 1), needed: s.max_jitter_ms });
     case "dropped": return say("reason_dropped", { measured: c.dropped_percent.toFixed(0), needed: s.max_dropped_percent });
     case "field_small": return say("reason_field_small", { measured: `${c.width_deg.toFixed(0)} × ${c.height_deg.toFixed(0)}`, needed: `${s.min_width_deg} × ${s.min_height_deg}` });
   }

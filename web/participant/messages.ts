@@ -14,6 +14,12 @@ export function setLanguage(language: string): void {
   document.documentElement.lang = language;
 }
 
+/** A number with so many decimals, as the language writes it. */
+export function figure(x: number, decimals: number): string {
+  const digits = { minimumFractionDigits: decimals, maximumFractionDigits: decimals, useGrouping: false };
+  return new Intl.NumberFormat(current === de ? "de" : "en", digits).format(x);
+}
+
 /** A message with its {places} filled in. */
 export function say(key: MessageKey, values: Record<string, string | number> = {}): string {
   return current[key].replace(/\{(\w+)\}/g, (whole, name: string) => (name in values ? String(values[name]) : whole));
