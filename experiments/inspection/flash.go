@@ -16,7 +16,11 @@ const (
 	maxTransitions = 6 // three pairs
 	flashFieldDeg  = 10.0
 	flashShare     = 0.25
-	secondMs       = 1000 - 1e-6 // changes exactly a second apart are not within one second
+	// concurrentMs is within what time changes in one direction are concurrent: two
+	// frames at 60 Hz, within which nearly all places of one flickering pattern pass the
+	// threshold, the fainter ones later.
+	concurrentMs = 1000.0 / 30
+	secondMs     = 1000 - 1e-6 // changes exactly a second apart are not within one second
 )
 
 // GeneralFlash tells whether a change between two relative luminances, 0 to 1,
@@ -65,7 +69,7 @@ func Luminance(r, g, b uint8) float64 {
 type FlashVerdict struct {
 	Passes bool
 	// WorstShare is the largest share of any 10° field that had more than three
-	// flashes within the second before WorstMs.
+	// flashes within the second before WorstMs, the last of them concurrently.
 	WorstShare  float64
 	WorstMs     float64
 	WorstXDeg   float64 // centre of that field
@@ -76,7 +80,8 @@ type FlashVerdict struct {
 // FlashCheck looks for general flashes in a sequence of frames. Displays are
 // achromatic, so that red flashes cannot arise. Every pixel counts its own
 // opposing changes; averages over fine patterns are not taken, so the check is
-// strict with balanced textures.
+// strict with balanced textures. Moving dots pass many places many times, but few
+// of them at once: they are no flash of a field.
 type FlashCheck struct {
 	screen   Screen
 	low      []float32 // extremes of relative luminance since the last change
@@ -156,24 +161,33 @@ func (c *FlashCheck) change(i int, l float32) bool {
 // measure finds the 10° field with the largest share of flashing pixels.
 func (c *FlashCheck) measure(atMs float64) {
 	w, h := c.screen.WidthPx, c.screen.HeightPx
-	for j := range h {
-		sum := int32(0)
-		for i := range w {
-			if len(c.times[j*w+i]) > maxTransitions {
-				sum++
+	for _, direction := range []int8{1, -1} {
+		for j := range h {
+			sum := int32(0)
+			for i := range w {
+				if c.flashes(j*w+i, direction, atMs) {
+					sum++
+				}
+				c.rows[j*(w+1)+i+1] = sum
 			}
-			c.rows[j*(w+1)+i+1] = sum
 		}
-	}
-	for j := 0; j < h; j += c.stride {
-		for i := 0; i < w; i += c.stride {
-			if share := c.share(i, j); share > c.verdict.WorstShare {
-				x, y := c.screen.Degrees(i, j)
-				c.verdict.WorstShare, c.verdict.WorstMs, c.verdict.WorstXDeg, c.verdict.WorstYDeg = share, atMs, x, y
+		for j := 0; j < h; j += c.stride {
+			for i := 0; i < w; i += c.stride {
+				if share := c.share(i, j); share > c.verdict.WorstShare {
+					x, y := c.screen.Degrees(i, j)
+					c.verdict.WorstShare, c.verdict.WorstMs, c.verdict.WorstXDeg, c.verdict.WorstYDeg = share, atMs, x, y
+				}
 			}
 		}
 	}
 	c.verdict.Passes = c.verdict.WorstShare < flashShare
+}
+
+// flashes tells whether pixel k has had more than three flashes within a second and
+// has just changed in a direction: flashes count together where they are concurrent.
+func (c *FlashCheck) flashes(k int, direction int8, atMs float64) bool {
+	n := len(c.times[k])
+	return n > maxTransitions && c.up[k] == direction && c.times[k][n-1] > atMs-concurrentMs
 }
 
 func (c *FlashCheck) share(i, j int) float64 {

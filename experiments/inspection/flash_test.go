@@ -125,3 +125,34 @@ func TestFlashAddsSlowChanges(t *testing.T) {
 		t.Errorf("%+v", v)
 	}
 }
+
+// Dots that pass every place many times a second, never a quarter of the field at
+// once, are no flash; the same light as one flicker of the field is.
+func TestMovingDotsAreNoFlash(t *testing.T) {
+	t.Parallel()
+	s := inspection.NewScreen(12, 12, 8, 0.5)
+	dots, field := inspection.NewFlashCheck(s), inspection.NewFlashCheck(s)
+	light := make([]float32, s.WidthPx*s.HeightPx)
+	for i := range 120 {
+		for k := range light {
+			light[k] = 1
+			if (k+i)%16 == 0 { // a sixteenth of the places is bright in every frame
+				light[k] = 2
+			}
+		}
+		dots.Add(light, float64(i)*1000/60)
+		for k := range light {
+			light[k] = 1
+			if i%16 == 0 {
+				light[k] = 2
+			}
+		}
+		field.Add(light, float64(i)*1000/60)
+	}
+	if v := dots.Verdict(); v.Transitions <= 6 || !v.Passes {
+		t.Errorf("the dots: %+v", v)
+	}
+	if v := field.Verdict(); v.Passes || v.WorstShare < 0.9 {
+		t.Errorf("the flickering field: %+v", v)
+	}
+}

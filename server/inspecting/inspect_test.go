@@ -75,6 +75,11 @@ func TestHazards(t *testing.T) {
 			t.Errorf("%s: %q, %v", name, hazard, err)
 		}
 	}
+	dots := read(t, "motion-coherence")
+	dots.Tasks[0].StimulusMs = 2500
+	if hazard, err := Hazards(context.Background(), dots); err != nil || hazard != "" {
+		t.Errorf("dots for 2.5 s: %q, %v", hazard, err)
+	}
 	s := read(t, "grating-direction")
 	d := &s.Displays[s.Tasks[s.Blocks[len(s.Blocks)-1].Task].Display]
 	flicker(t, s)
