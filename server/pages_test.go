@@ -374,6 +374,18 @@ func (w *walker) others(address string) {
 	w.do(emulation.SetTouchEmulationEnabled(false))
 	w.wide()
 
+	var hiding page.ScriptIdentifier
+	w.do(chromedp.ActionFunc(func(ctx context.Context) (err error) {
+		hiding, err = page.AddScriptToEvaluateOnNewDocument(`HTMLCanvasElement.prototype.getContext = () => null;`).Do(ctx)
+		return err
+	}))
+	again()
+	w.look("unfit")
+	w.says(".sheet", "WebGL2 is missing")
+	w.do(chromedp.ActionFunc(func(ctx context.Context) error {
+		return page.RemoveScriptToEvaluateOnNewDocument(hiding).Do(ctx)
+	}))
+
 	again()
 	w.consent()
 	w.see("page-screening")
